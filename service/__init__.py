@@ -1,0 +1,1 @@
+"""Leastbend: the least polynomial degree that calibration data can defend."""
