@@ -1,0 +1,104 @@
+"""Which points are held out together. Membership comes from scikit-learn's splitters alone."""
+
+import hashlib
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+import numpy.typing as npt
+from sklearn.model_selection import LeaveOneGroupOut, LeaveOneOut, RepeatedKFold
+
+from service.core.observations import Integers, Observations
+from service.core.plan import Resampling
+from service.core.result import FoldRecord
+
+Assignment = npt.NDArray[np.int32]
+DIGEST_OF = "SHA-256 of the fold number of each point, repeat by repeat, as little-endian 32-bit integers"
+
+
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class Folds:
+    """Fold membership. assignment: (repeats, n), the fold of each point, from 0 in each repeat.
+
+    members: the points of each fold, repeat by repeat; repeat_of: which repeat each fold belongs to.
+    """
+
+    assignment: Assignment
+    members: tuple[Integers, ...]
+    repeat_of: Integers
+    record: FoldRecord
+
+
+def make_folds(observations: Observations, resampling: Resampling) -> Folds:
+    """Folds under the plan's scheme.
+
+    `k_fold` with as many folds as points, or more, is leave-one-out, once. Sizes of `k_fold` differ by
+    one at most: the first n mod k folds of each repeat hold one point more.
+    """
+    n = observations.n
+    if resampling.scheme == "k_fold" and resampling.folds < n:
+        return _k_fold(n, resampling.folds, resampling.repeats, resampling.seed)
+    if resampling.scheme == "leave_level_out":
+        return _leave_group_out(observations.level, "leave_level_out")
+    if resampling.scheme == "leave_series_out":
+        labels = observations.series or ()
+        number = {label: i for i, label in enumerate(dict.fromkeys(labels))}
+        return _leave_group_out(np.array([number[label] for label in labels], dtype=np.intp), "leave_series_out")
+    return _leave_one_out(n)
+
+
+def from_assignment(assignment: Assignment, *, scheme: str, seed: int | None, method: str) -> Folds:
+    """Folds from a fold number for each point and repeat: shape (repeats, n), numbered from 0."""
+    members: list[Integers] = []
+    repeat_of: list[int] = []
+    for repeat, row in enumerate(assignment):
+        order = np.argsort(row, kind="stable")
+        cuts = np.cumsum(np.bincount(row))[:-1]
+        parts: Sequence[Integers] = np.split(order, cuts)
+        members.extend(parts)
+        repeat_of.extend([repeat] * len(parts))
+    record = FoldRecord(
+        scheme=scheme,
+        folds=len(members) // max(1, len(assignment)),
+        repeats=len(assignment),
+        seed=seed,
+        method=f"{method}; digest: {DIGEST_OF}",
+        digest=hashlib.sha256(np.ascontiguousarray(assignment, dtype="<i4").tobytes()).hexdigest(),
+    )
+    return Folds(
+        assignment=assignment, members=tuple(members), repeat_of=np.array(repeat_of, dtype=np.intp), record=record
+    )
+
+
+@lru_cache(maxsize=256)
+def _small_k_fold(n: int, folds: int, repeats: int, seed: int) -> Folds:
+    splitter = RepeatedKFold(n_splits=folds, n_repeats=repeats, random_state=seed)
+    assignment = np.empty((repeats, n), dtype=np.int32)
+    for i, (_, held_out) in enumerate(splitter.split(np.zeros(n))):
+        assignment[i // folds, held_out] = i % folds
+    method = f"sklearn.model_selection.RepeatedKFold(n_splits={folds}, n_repeats={repeats}, random_state={seed})"
+    return from_assignment(assignment, scheme="k_fold", seed=seed, method=method)
+
+
+def _k_fold(n: int, folds: int, repeats: int, seed: int) -> Folds:
+    # membership depends on four numbers only, and a laboratory's datasets share them
+    return _small_k_fold(n, folds, repeats, seed) if n <= 2000 else _small_k_fold.__wrapped__(n, folds, repeats, seed)
+
+
+@lru_cache(maxsize=64)
+def _leave_one_out(n: int) -> Folds:
+    assignment = np.empty((1, n), dtype=np.int32)
+    if n <= 2000:
+        for i, (_, held_out) in enumerate(LeaveOneOut().split(np.zeros(n))):
+            assignment[0, held_out] = i
+    else:  # the same folds, without a million index lists
+        assignment[0] = np.arange(n)
+    return from_assignment(assignment, scheme="leave_one_out", seed=None, method="sklearn.model_selection.LeaveOneOut")
+
+
+def _leave_group_out(group: Integers, scheme: str) -> Folds:
+    assignment = np.empty((1, group.size), dtype=np.int32)
+    for i, (_, held_out) in enumerate(LeaveOneGroupOut().split(np.zeros(group.size), groups=group)):
+        assignment[0, held_out] = i
+    return from_assignment(assignment, scheme=scheme, seed=None, method="sklearn.model_selection.LeaveOneGroupOut")

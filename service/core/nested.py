@@ -1,0 +1,175 @@
+"""One factorisation for every degree: Chebyshev basis, one QR, and what follows from it.
+
+With A the basis matrix (rows scaled by the square root of the weight) and A = QR, the first columns
+of Q span the polynomials of each lower degree, so residuals, leverages and sums of squares of all
+degrees are cumulative sums over columns (Golub & Van Loan, Matrix Computations, 4th ed., 5.3).
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import solve_triangular
+
+from service.core.observations import Floats, Observations
+
+EPS = float(np.finfo(np.float64).eps)
+RANK_TOLERANCE = 1e-12  # of a column's length: below it the column adds nothing double precision can hold
+
+
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class NestedFits:
+    """All least-squares fits of degree 0..top to one dataset under one weighting.
+
+    Arrays have one column or entry per degree 0..top. Without intercept, degree 0 is the zero curve.
+    q: (n, p) orthonormal; r: (p, p) upper triangular; qty: (p,) coefficients on q.
+    residuals: (n, top+1), scaled by sqrt(weight); leverage: (n, top+1); rss: (top+1,).
+    weights: (n,), 1/variance up to a factor. tss: about the weighted mean, or about 0 without intercept.
+    rounding_rss: a weighted sum of squares that rounding of x and y alone can cause.
+    """
+
+    x: Floats
+    y: Floats
+    weights: Floats
+    domain: tuple[float, float]
+    intercept: bool
+    top: int
+    q: Floats
+    r: Floats
+    qty: Floats
+    residuals: Floats
+    leverage: Floats
+    rss: Floats
+    tss: float
+    rounding_rss: float
+
+    @property
+    def n(self) -> int:
+        """Number of points."""
+        return self.y.size
+
+    def columns(self, degree: int) -> int:
+        """Number of coefficients of a degree."""
+        return degree + 1 if self.intercept else degree
+
+    def df(self, degree: int) -> int:
+        """Residual degrees of freedom of a degree."""
+        return self.n - self.columns(degree)
+
+    def basis_at(self, x: Floats) -> Floats:
+        """The unscaled basis at x: shape (len(x), p)."""
+        return basis(x, self.domain, self.top, self.intercept)
+
+    def orthonormal_at(self, x: Floats) -> Floats:
+        """The polynomials whose weighted values at the data are the columns of q, at x: (len(x), p)."""
+        return np.asarray(solve_triangular(self.r, self.basis_at(x).T, trans="T", check_finite=False).T)
+
+    def chebyshev(self, degree: int) -> Floats:
+        """Coefficients of the fit on T_0..T_degree of t over `domain`: shape (degree+1,)."""
+        c = self.columns(degree)
+        if c == 0:
+            return np.zeros(1)
+        b = np.asarray(solve_triangular(self.r[:c, :c], self.qty[:c], check_finite=False))
+        return to_chebyshev(self.domain, c, self.intercept) @ b
+
+    def unscaled_covariance(self, degree: int) -> Floats:
+        """Covariance of `chebyshev(degree)` for unit residual variance: (degree+1, degree+1)."""
+        c = self.columns(degree)
+        inverse = np.asarray(solve_triangular(self.r[:c, :c], np.eye(c), check_finite=False))
+        root = to_chebyshev(self.domain, c, self.intercept) @ inverse
+        return np.asarray(root @ root.T)
+
+
+def basis(x: Floats, domain: tuple[float, float], top: int, intercept: bool) -> Floats:
+    """T_0..T_top of t at x; without intercept x/scale times T_0..T_(top-1), which vanish at x = 0."""
+    lo, hi = domain
+    # (x - lo) + (x - hi) keeps the digits that 2x - lo - hi loses when x is far from 0
+    t = ((x - lo) + (x - hi)) / (hi - lo)
+    columns = np.empty((top + 1, x.size))
+    columns[0] = 1.0
+    if top >= 1:
+        columns[1] = t
+    twice = t + t
+    for j in range(2, top + 1):
+        np.multiply(twice, columns[j - 1], out=columns[j])
+        columns[j] -= columns[j - 2]
+    if intercept:
+        return columns.T
+    return (columns[:top] * (x / max(abs(lo), abs(hi)))).T
+
+
+def to_chebyshev(domain: tuple[float, float], columns: int, intercept: bool) -> Floats:
+    """Matrix from coefficients on `basis` to coefficients on T_0..T_degree."""
+    if intercept:
+        return np.eye(columns)
+    lo, hi = domain
+    scale = max(abs(lo), abs(hi))
+    middle, half = (lo + hi) / 2 / scale, (hi - lo) / 2 / scale
+    m = np.zeros((columns + 1, columns))  # x/scale = middle + half t, and t T_j = (T_{j+1} + T_|j-1|)/2
+    for j in range(columns):
+        m[j, j] += middle
+        m[j + 1, j] += half / 2
+        m[abs(j - 1), j] += half / 2
+    return m
+
+
+def highest_estimable(observations: Observations, max_degree: int, intercept: bool) -> int:
+    """Highest degree that leaves a spare degree of freedom and has levels enough."""
+    n, levels = observations.n, observations.levels
+    if intercept:
+        return min(max_degree, levels - 1, n - 2)
+    nonzero = levels - int(np.any(observations.level_x == 0))
+    return min(max_degree, nonzero, n - 1)
+
+
+def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool = True) -> NestedFits:
+    """Fit every degree 0..top, or as far as double precision can tell the columns apart.
+
+    x, y, weights: shape (n,), weights > 0 (1/variance up to a factor); top < number of distinct x.
+    """
+    lo, hi = float(x.min()), float(x.max())
+    root_w = np.sqrt(weights)
+    a = basis(x, (lo, hi), top, intercept) * root_w[:, None]
+    z = root_w * y
+    q, r = np.linalg.qr(a)
+    lengths = np.sqrt(np.einsum("ij,ij->j", a, a))
+    degenerate = np.flatnonzero(np.abs(np.diag(r)) <= RANK_TOLERANCE * lengths)
+    if degenerate.size:
+        p = int(degenerate[0])
+        top = p - 1 if intercept else p
+        q, r = q[:, :p], r[:p, :p]
+    qty = q.T @ z
+    left = z - q @ qty
+    again = q.T @ left  # one more projection takes out what rounding left of the fit
+    qty = qty + again
+    left -= q @ again
+    p = qty.size
+    parts = q * qty
+    residuals = np.empty((z.size, p + 1))
+    residuals[:, p] = left
+    for j in range(p - 1, -1, -1):
+        np.add(residuals[:, j + 1], parts[:, j], out=residuals[:, j])
+    squares = np.concatenate(([0.0], np.cumsum((qty * qty)[::-1])))[::-1]
+    rss = float(left @ left) + squares
+    leverage = np.cumsum(q * q, axis=1)
+    if intercept:
+        residuals, rss = residuals[:, 1:], rss[1:]
+    else:
+        leverage = np.concatenate((np.zeros((z.size, 1)), leverage), axis=1)
+    spread = float(y.max() - y.min()) / (hi - lo) * float(np.abs(x).max())
+    rounding = 4 * EPS * (float(np.abs(y).max()) + spread)
+    return NestedFits(
+        x=x,
+        y=y,
+        weights=weights,
+        domain=(lo, hi),
+        intercept=intercept,
+        top=top,
+        q=q,
+        r=r,
+        qty=qty,
+        residuals=residuals,
+        leverage=leverage,
+        rss=rss,
+        tss=float(rss[0]),
+        rounding_rss=float(weights.sum()) * rounding * rounding,
+    )

@@ -1,0 +1,90 @@
+"""The other rules, each applied to the same numbers, so that the choice can be seen beside them."""
+
+import numpy as np
+
+from service.core.criteria import aicc, bic
+from service.core.cross_validation import HeldOut
+from service.core.nested import NestedFits
+from service.core.observations import Floats
+from service.core.plan import Rule
+from service.core.result import RuleChoice
+
+RELATIVE_TIE = 1e-12  # values closer than this are equal: the lower degree is taken
+
+
+def other_rule(rule: Rule, fits: NestedFits, held: HeldOut, min_degree: int) -> RuleChoice:
+    """What `rule` (any but `least_bend`) chooses among degrees min_degree..top."""
+    exact = exact_degree(fits, min_degree)
+    if exact is not None:
+        return RuleChoice(rule=rule, degree=exact, reason="the least degree whose residuals are at the level of rounding")
+    if rule in ("aicc", "bic"):
+        return _least(rule, (aicc if rule == "aicc" else bic)(fits), min_degree)
+    if rule == "lowest_cv":
+        return _least(rule, pooled_mean_square(held), min_degree)
+    return _one_standard_error(held, min_degree)
+
+
+def exact_degree(fits: NestedFits, min_degree: int) -> int | None:
+    """The least degree whose residuals are at rounding level: there every criterion is unbounded."""
+    exact = np.flatnonzero(fits.rss[min_degree:] <= fits.rounding_rss)
+    return int(exact[0]) + min_degree if exact.size else None
+
+
+def pooled_mean_square(held: HeldOut) -> Floats:
+    """Weighted mean of squared held-out errors over all folds and repeats; NaN unless every fold counts."""
+    return np.asarray(held.sse.sum(axis=0) / held.weight.sum())
+
+
+def _least(rule: str, values: Floats, min_degree: int) -> RuleChoice:
+    usable = values[min_degree:]
+    if np.all(np.isnan(usable)):
+        return RuleChoice(rule=rule, degree=None, reason="no degree can be judged by this rule on these data")
+    best = float(np.nanmin(usable))
+    near = np.flatnonzero(usable <= best + RELATIVE_TIE * abs(best))
+    return RuleChoice(rule=rule, degree=int(near[0]) + min_degree)
+
+
+def _one_standard_error(held: HeldOut, min_degree: int) -> RuleChoice:
+    """The least degree within one standard error of the lowest cross-validated mean square error.
+
+    Breiman, Friedman, Olshen & Stone 1984, 3.4.3; the standard error is that of the fold means within
+    a repeat, averaged over repeats.
+    """
+    rule = "one_standard_error"
+    pooled = pooled_mean_square(held)
+    lowest = _least(rule, pooled, min_degree)
+    if lowest.degree is None:
+        return lowest
+    fold_mean = held.sse[:, lowest.degree] / held.weight
+    errors = [
+        float(np.std(part, ddof=1)) / np.sqrt(part.size)
+        for part in (fold_mean[held.repeat_of == r] for r in range(int(held.repeat_of.max()) + 1))
+        if part.size > 1
+    ]
+    if not errors:
+        return RuleChoice(rule=rule, degree=None, reason="one fold has no standard error")
+    limit = pooled[lowest.degree] + float(np.mean(errors))
+    within = np.flatnonzero(pooled[min_degree:] <= limit)
+    return RuleChoice(rule=rule, degree=int(within[0]) + min_degree)
+
+
+def stability_by_repeat(rule: Rule, held: HeldOut, min_degree: int) -> list[int]:
+    """For the cross-validation rules: the choice of each repeat on its own."""
+    picks: list[int] = []
+    for r in range(int(held.repeat_of.max()) + 1):
+        rows = held.repeat_of == r
+        part = HeldOut(
+            sse=held.sse[rows],
+            weight=held.weight[rows],
+            size=held.size[rows],
+            training_rss=held.training_rss[rows],
+            repeat_of=np.zeros(int(rows.sum()), dtype=np.intp),
+            estimable=held.estimable[rows],
+        )
+        if rule == "lowest_cv":
+            pick = _least(rule, pooled_mean_square(part), min_degree).degree
+        else:
+            pick = _one_standard_error(part, min_degree).degree
+        if pick is not None:
+            picks.append(pick)
+    return picks

@@ -1,0 +1,130 @@
+"""Weights: as asked, from u_y, or chosen by restricted likelihood among 1, 1/|x| and 1/x^2.
+
+Restricted (residual) maximum likelihood: Patterson & Thompson, Biometrika 58 (1971) 545; Harville,
+JASA 72 (1977) 320. Errors in x enter by the effective variance: Orear, Am. J. Phys. 50 (1982) 912.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.polynomial import chebyshev
+
+from service.core.nested import NestedFits, fit_all
+from service.core.observations import Floats, Observations
+from service.core.plan import Plan
+from service.core.result import WeightChoice, WeightModel
+from service.core.screen import Walked, choose_with_screen
+
+GAIN_NEEDED = 2.0  # of log-likelihood, to leave equal weights
+RATIO_NEEDED = 1.5  # of the largest |x| to the least, for 1/x to differ from 1
+EFFECTIVE_ROUNDS = 20
+
+
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class Weighted:
+    """The nested fits under the weights used, with the choice record and, if made already, the walk."""
+
+    fits: NestedFits
+    choice: WeightChoice
+    walked: Walked | None
+    absolute: bool
+    """True when the weights are 1/variance in the unit of y, so that a chi-square has meaning."""
+
+
+def weigh(observations: Observations, plan: Plan, *, top: int) -> Weighted:
+    """Fit every degree under the weights that the plan asks for (checked beforehand against the data)."""
+    asked = plan.weights
+    if asked == "u_y" or (asked == "auto" and observations.u_y is not None):
+        return _from_uncertainty(observations, plan, top)
+    if asked == "auto":
+        return _compare(observations, plan, top)
+    fits = fit_all(observations.x, observations.y, power_weights(observations.x, asked), top=top, intercept=plan.intercept)
+    choice = WeightChoice(asked=asked, used=asked, common_degree=None, compared=(), why="as the plan asks")
+    return Weighted(fits=fits, choice=choice, walked=None, absolute=False)
+
+
+def power_weights(x: Floats, name: str) -> Floats:
+    """Weights by name; 1/|x| and 1/x^2 need x without zeros."""
+    if name == "1/x":
+        return np.asarray(1.0 / np.abs(x))
+    if name == "1/x^2":
+        return np.asarray(1.0 / (x * x))
+    return np.ones_like(x)
+
+
+def restricted_log_likelihood(fits: NestedFits, degree: int) -> float:
+    """Restricted log-likelihood at the best error variance, up to a constant common to all weightings.
+
+    -(1/2) [ (n-p) log(RSS/(n-p)) + log det(X'WX) - sum log w ], X the unweighted basis.
+    """
+    c, df = fits.columns(degree), fits.df(degree)
+    rss = max(float(fits.rss[degree]), fits.rounding_rss, 1e-300)
+    log_det = 2.0 * float(np.sum(np.log(np.abs(np.diag(fits.r)[:c]))))
+    return -0.5 * (df * math.log(rss / df) + log_det - float(np.sum(np.log(fits.weights))))
+
+
+def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
+    x, y = observations.x, observations.y
+    size = np.abs(x)
+    equal = fit_all(x, y, np.ones_like(x), top=top, intercept=plan.intercept)
+    why = ""
+    if size.min() == 0:
+        why = "equal weights: x holds 0, where 1/x has no value"
+    elif size.max() / size.min() <= RATIO_NEEDED:
+        why = f"equal weights: the largest |x| is within {RATIO_NEEDED} times the least, so 1/x would hardly differ"
+    elif equal.rss[equal.top] <= equal.rounding_rss:
+        why = "equal weights: the residuals are at the level of rounding and cannot tell"
+    if why:
+        choice = WeightChoice(asked="auto", used="equal", common_degree=None, compared=(), why=why)
+        return Weighted(fits=equal, choice=choice, walked=None, absolute=False)
+    names = ("equal", "1/x", "1/x^2")
+    all_fits = [equal] + [fit_all(x, y, power_weights(x, name), top=top, intercept=plan.intercept) for name in names[1:]]
+    walks = [choose_with_screen(fits, known_uncertainty=False) for fits in all_fits]
+    least = 0 if plan.intercept else 1
+    common = min(max(least, *(w.degree for w in walks)), *(f.top for f in all_fits))
+    likelihood = [restricted_log_likelihood(fits, common) for fits in all_fits]
+    gains = [value - likelihood[0] for value in likelihood]
+    best = int(np.argmax(gains))
+    if gains[best] < GAIN_NEEDED:
+        best = 0
+    compared = tuple(
+        WeightModel(weights=name, picks_degree=w.degree, restricted_log_likelihood=value, gain_over_equal=gain)
+        for name, w, value, gain in zip(names, walks, likelihood, gains, strict=True)
+    )
+    if best == 0:
+        why = f"equal weights: no other gains {GAIN_NEEDED:g} or more in restricted log-likelihood (best gain {max(gains[1:]):.2f})"
+    else:
+        why = f"{names[best]}: gains {gains[best]:.2f} in restricted log-likelihood over equal weights"
+    choice = WeightChoice(asked="auto", used=names[best], common_degree=common, compared=compared, why=why)
+    return Weighted(fits=all_fits[best], choice=choice, walked=walks[best], absolute=False)
+
+
+def _from_uncertainty(observations: Observations, plan: Plan, top: int) -> Weighted:
+    assert observations.u_y is not None
+    x, y = observations.x, observations.y
+    variance = observations.u_y**2
+    fits = fit_all(x, y, 1.0 / variance, top=top, intercept=plan.intercept)
+    used, why = "u_y", "1/u_y^2, from the uncertainties given"
+    walked = None
+    if observations.u_x is not None:
+        used, why = "u_y and u_x", "1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given"
+        for _ in range(EFFECTIVE_ROUNDS):
+            walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
+            degree = min(max(walked.degree, plan.min_degree), fits.top)
+            slope = slope_at(fits, degree, x)
+            new = 1.0 / (variance + (slope * observations.u_x) ** 2)
+            change = float(np.max(np.abs(new / fits.weights - 1)))
+            fits = fit_all(x, y, new, top=top, intercept=plan.intercept)
+            walked = None
+            if change < 1e-10:
+                break
+    choice = WeightChoice(asked=plan.weights, used=used, common_degree=None, compared=(), why=why)
+    return Weighted(fits=fits, choice=choice, walked=walked, absolute=True)
+
+
+def slope_at(fits: NestedFits, degree: int, x: Floats) -> Floats:
+    """dp/dx of one fit at x."""
+    lo, hi = fits.domain
+    derivative = chebyshev.chebder(fits.chebyshev(degree)) * (2.0 / (hi - lo))
+    return np.asarray(chebyshev.chebval(((x - lo) + (x - hi)) / (hi - lo), derivative))
