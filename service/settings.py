@@ -1,0 +1,66 @@
+"""One frozen settings class. Nothing is read on import: whoever starts a process builds one and passes it on.
+
+Every field is also an environment variable with the prefix LEASTBEND_ (LEASTBEND_DATA_DIR, LEASTBEND_PORT, ...).
+"""
+
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Self
+
+from pydantic import Field, model_validator
+from pydantic_settings import BaseSettings, SettingsConfigDict
+
+PREFIX = "LEASTBEND_"
+
+
+class Settings(BaseSettings):
+    """How one installation runs. Times are in seconds."""
+
+    model_config = SettingsConfigDict(env_prefix=PREFIX, frozen=True, extra="ignore")
+
+    data_dir: Path = Field(Path("leastbend-data"), description="Directory of the SQLite files; made if absent.")
+    database_url: str | None = Field(
+        None, description="SQLAlchemy URL of PostgreSQL (postgresql+psycopg://...); absent: SQLite in data_dir."
+    )
+    host: str = Field("127.0.0.1", description="Address to listen on; only loopback while there are no keys.")
+    port: int = Field(8080, ge=0, le=65535, description="TCP port to listen on; 0 takes a free one.")
+    workers: int = Field(2, ge=0, le=256, description="Worker processes that `serve` starts; 0 starts none.")
+    log_level: str = Field("INFO", pattern="^(DEBUG|INFO|WARNING|ERROR)$", description="Least severe level logged.")
+
+    body_bytes: int = Field(32 * 2**20, ge=1024, description="Largest request body (413 above it).")
+    points: int = Field(1_000_000, ge=3, description="Most points of one dataset posted as JSON (413 above it).")
+    queue_depth: int = Field(20_000, ge=1, description="Most jobs waiting; a post beyond it gets 503.")
+    page_limit: int = Field(200, ge=1, le=10_000, description="Most items on one page of a list.")
+    wait_seconds: float = Field(60.0, ge=0, le=3600, description="Longest wait granted to `Prefer: wait`.")
+    wait_tick_seconds: float = Field(0.02, gt=0, le=10, description="How often waiting callers' jobs are looked up.")
+
+    job_seconds: float = Field(600.0, gt=0, description="Longest run of one job; then it is stopped and failed.")
+    max_attempts: int = Field(5, ge=1, le=100, description="Starts of one job before it is failed for good.")
+    lease_seconds: float = Field(10.0, gt=0, description="A running job whose worker is silent so long is run again.")
+    retry_seconds: float = Field(0.2, ge=0, description="Pause before the second attempt; doubles with each.")
+    sweep_seconds: int = Field(1, ge=1, le=30, description="How often lost messages and lost workers are looked for.")
+    stop_seconds: float = Field(20.0, ge=0, description="Time that a running job gets to finish at a graceful stop.")
+
+    @model_validator(mode="after")
+    def _database_is_known(self) -> Self:
+        if self.database_url is not None and not self.database_url.startswith("postgresql+psycopg://"):
+            raise ValueError("database_url must start with postgresql+psycopg:// (leave it out for SQLite)")
+        if 60 % self.sweep_seconds:
+            raise ValueError("sweep_seconds must divide 60")
+        return self
+
+    @property
+    def postgres(self) -> bool:
+        """Whether data and queue live on PostgreSQL."""
+        return self.database_url is not None
+
+    @property
+    def heartbeat_seconds(self) -> float:
+        """A lease survives three lost heartbeats."""
+        return self.lease_seconds / 4
+
+    def environment(self) -> Mapping[str, str]:
+        """Environment variables that give a child process these settings."""
+        values = self.model_dump(mode="json", exclude_none=True)
+        values["data_dir"] = str(self.data_dir.absolute())
+        return {f"{PREFIX}{name.upper()}": str(value) for name, value in values.items()}

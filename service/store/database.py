@@ -1,0 +1,125 @@
+"""Engines and the one transaction scope: `with database.write() as connection:` commits at its end or not at all.
+
+SQLite has one writer at a time, so writers share one connection and start with BEGIN IMMEDIATE: waiting happens in
+the pool and in the busy handler, never as a failed upgrade of a read lock. Readers have their own connections.
+"""
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy.exc import DBAPIError
+from sqlalchemy.exc import TimeoutError as PoolTimeout
+
+from service.errors import Overloaded, Unusable
+from service.settings import Settings
+
+BUSY_SECONDS = 30
+READERS = 8
+FILE_NAME = "leastbend.db"
+PASSING_FAILURES = (
+    ("disk is full", "disk_full", "the disk of the database is full; nothing was stored"),
+    ("no space left", "disk_full", "the disk of the database is full; nothing was stored"),
+    ("disk i/o error", "disk_full", "the disk of the database does not take or give data; nothing was stored"),
+    ("database is locked", "database_busy", "the database is busy"),
+    ("starting up", "database_away", "the database is starting"),
+    ("shutting down", "database_away", "the database is stopping"),
+    ("connection", "database_away", "the database cannot be reached"),
+)
+
+
+@dataclass(frozen=True, kw_only=True)
+class Database:
+    """Where one process reads and writes. On PostgreSQL both engines are one."""
+
+    reader: Engine
+    writer: Engine
+
+    @contextmanager
+    def read(self) -> Iterator[Connection]:
+        """A transaction that only reads."""
+        with _translated(), self.reader.begin() as connection:
+            yield connection
+
+    @contextmanager
+    def write(self) -> Iterator[Connection]:
+        """A transaction that may write; commits at the end, rolls back on any error."""
+        with _translated(), self.writer.begin() as connection:
+            yield connection
+
+    @property
+    def postgres(self) -> bool:
+        """Whether this is PostgreSQL."""
+        return self.writer.dialect.name == "postgresql"
+
+    def close(self) -> None:
+        """Give back every connection."""
+        self.reader.dispose()
+        self.writer.dispose()
+
+
+def open_database(settings: Settings, *, durable: bool) -> Database:
+    """Connect lazily. `durable`: a commit survives a power failure (SQLite synchronous=FULL).
+
+    Workers pass False: a claim or finish lost to a power failure only runs the job again.
+    """
+    if settings.database_url is not None:
+        engine = create_engine(settings.database_url, pool_size=READERS, max_overflow=READERS, pool_pre_ping=True)
+        return Database(reader=engine, writer=engine)
+    path = prepare_directory(settings.data_dir) / FILE_NAME
+    synchronous = "FULL" if durable else "NORMAL"
+    return Database(
+        reader=_sqlite(path, begin="BEGIN", synchronous=synchronous, connections=READERS),
+        writer=_sqlite(path, begin="BEGIN IMMEDIATE", synchronous=synchronous, connections=1),
+    )
+
+
+def prepare_directory(directory: Path) -> Path:
+    """Make the data directory; it holds measurements, so only its owner may enter one made here."""
+    try:
+        directory.mkdir(mode=0o700, parents=True, exist_ok=True)
+    except OSError as error:
+        raise Unusable(f"cannot make the data directory {directory}: {error.strerror}") from error
+    return directory.absolute()
+
+
+def _sqlite(path: Path, *, begin: str, synchronous: str, connections: int) -> Engine:
+    engine = create_engine(
+        f"sqlite:///{path}",
+        pool_size=connections,
+        max_overflow=0,
+        pool_timeout=BUSY_SECONDS,
+        connect_args={"timeout": BUSY_SECONDS, "isolation_level": None, "check_same_thread": False},
+    )
+
+    @event.listens_for(engine, "connect")
+    def prepare(connection: Any, _record: Any) -> None:
+        connection.execute("PRAGMA journal_mode=WAL")
+        connection.execute(f"PRAGMA synchronous={synchronous}")
+        connection.execute("PRAGMA foreign_keys=ON")
+
+    @event.listens_for(engine, "begin")
+    def start(connection: Connection) -> None:
+        connection.exec_driver_sql(begin)
+
+    return engine
+
+
+@contextmanager
+def _translated() -> Iterator[None]:
+    """A database that is busy, full or away is no fault of the caller: say so, and that a retry may help."""
+    try:
+        yield
+    except PoolTimeout as error:
+        raise Overloaded("the database is busy", retry_after=1, code="database_busy") from error
+    except DBAPIError as error:
+        text = str(error.orig).lower()
+        for sign, code, words in PASSING_FAILURES:
+            if sign in text:
+                raise Overloaded(words, retry_after=5, code=code) from error
+        if error.connection_invalidated:
+            raise Overloaded("the database connection was lost", retry_after=5, code="database_away") from error
+        raise

@@ -1,0 +1,121 @@
+"""Datasets: their canonical document and digest, storing each content once, and reading them back exactly."""
+
+import json
+from typing import Any, cast
+
+import numpy as np
+from sqlalchemy import Connection, RowMapping, select
+from sqlalchemy.dialects.postgresql import insert
+
+from service.core.observations import Floats, Observations
+from service.store.clock import new_id
+from service.store.codec import canonical
+from service.store.records import DatasetContent, DatasetRecord, Page
+from service.store.tables import datasets
+
+LITTLE_ENDIAN = "<f8"
+HEAD = (
+    datasets.c.id,
+    datasets.c.digest,
+    datasets.c.subject,
+    datasets.c.created_at,
+    datasets.c.points,
+    datasets.c.summary,
+    datasets.c.details,
+)
+
+
+def dataset_document(content: DatasetContent) -> bytes:
+    """Canonical JSON of the dataset as posted: what `dataset_digest` is the SHA-256 of."""
+    document: dict[str, Any] = {**content.details, "subject": content.subject}
+    for name, column in columns(content).items():
+        document[name] = column.tolist()
+    if content.series is not None:
+        document["series"] = list(content.series)
+    return canonical(document)
+
+
+def columns(content: DatasetContent) -> dict[str, Floats]:
+    """The columns of numbers that there are, by name."""
+    found = {"x": content.x, "y": content.y, "u_x": content.u_x, "u_y": content.u_y}
+    return {name: column for name, column in found.items() if column is not None}
+
+
+def summarise(content: DatasetContent, observed: Observations) -> dict[str, Any]:
+    """What a list of datasets shows of one."""
+    return {
+        "points": observed.n,
+        "levels": observed.levels,
+        "x_range": [float(content.x.min()), float(content.x.max())],
+        "y_range": [float(content.y.min()), float(content.y.max())],
+        "columns": [*columns(content), *(["series"] if content.series is not None else [])],
+    }
+
+
+def store(
+    connection: Connection, content: DatasetContent, digest: str, summary: dict[str, Any], now: Any
+) -> tuple[str, bool]:
+    """Id of the dataset with this digest, and whether it is new."""
+    found = connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar()
+    if found is not None:
+        return found, False
+    row = {
+        "id": new_id(),
+        "digest": digest,
+        "subject": content.subject,
+        "created_at": now,
+        "points": content.x.size,
+        "summary": json.dumps(summary),
+        "details": json.dumps(content.details),
+        "series": None if content.series is None else json.dumps(content.series),
+        **{name: column.astype(LITTLE_ENDIAN).tobytes() for name, column in columns(content).items()},
+    }
+    # The same statement text serves SQLite, and one of two callers at the same moment finds the other's row.
+    statement = insert(datasets).on_conflict_do_nothing(index_elements=["digest"]).returning(datasets.c.id)
+    new = connection.execute(statement, row).scalar()
+    if new is not None:
+        return cast(str, new), True
+    return connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar_one(), False
+
+
+def find(connection: Connection, dataset_id: str) -> DatasetRecord | None:
+    """One dataset without its points."""
+    row = connection.execute(select(*HEAD).where(datasets.c.id == dataset_id)).mappings().first()
+    return None if row is None else _record(row)
+
+
+def load(connection: Connection, dataset_id: str) -> tuple[DatasetContent, str] | None:
+    """The whole content of one dataset, exactly as stored, and its digest."""
+    row = connection.execute(select(datasets).where(datasets.c.id == dataset_id)).mappings().first()
+    if row is None:
+        return None
+    content = DatasetContent(
+        subject=row["subject"],
+        x=_floats(row["x"]),
+        y=_floats(row["y"]),
+        u_x=None if row["u_x"] is None else _floats(row["u_x"]),
+        u_y=None if row["u_y"] is None else _floats(row["u_y"]),
+        series=None if row["series"] is None else tuple(json.loads(row["series"])),
+        details=json.loads(row["details"]),
+    )
+    return content, row["digest"]
+
+
+def newest(connection: Connection, *, subject: str | None, before: str | None, limit: int) -> Page[DatasetRecord]:
+    """Datasets, newest first."""
+    query = select(*HEAD).order_by(datasets.c.id.desc()).limit(limit + 1)
+    if subject is not None:
+        query = query.where(datasets.c.subject == subject)
+    if before is not None:
+        query = query.where(datasets.c.id < before)
+    rows = [_record(row) for row in connection.execute(query).mappings()]
+    return Page(items=tuple(rows[:limit]), after=rows[limit - 1].id if len(rows) > limit else None)
+
+
+def _record(row: RowMapping) -> DatasetRecord:
+    values = dict(row)
+    return DatasetRecord(**(values | {name: json.loads(values[name]) for name in ("summary", "details")}))
+
+
+def _floats(blob: bytes) -> Floats:
+    return np.frombuffer(blob, dtype=LITTLE_ENDIAN).astype(np.float64)

@@ -1,0 +1,20 @@
+"""What happened to a job, in order; never changed afterwards."""
+
+import json
+from datetime import datetime
+from typing import Any
+
+from sqlalchemy import Connection, insert, select
+
+from service.store.tables import job_events
+
+
+def add(connection: Connection, job_id: str, kind: str, now: datetime, **detail: Any) -> None:
+    """One event: `queued`, `started`, `requeued`, `succeeded` or `failed`, with what is known of it."""
+    connection.execute(insert(job_events), {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
+
+
+def of_job(connection: Connection, job_id: str) -> list[tuple[str, datetime, dict[str, Any]]]:
+    """Kind, time and detail of every event of one job, oldest first."""
+    query = select(job_events).where(job_events.c.job_id == job_id).order_by(job_events.c.id)
+    return [(row.kind, row.at, json.loads(row.detail)) for row in connection.execute(query)]

@@ -1,0 +1,20 @@
+"""Plans: immutable documents named by their digest."""
+
+from datetime import datetime
+
+from sqlalchemy import Connection, select
+from sqlalchemy.dialects.postgresql import insert
+
+from service.store.tables import plans
+
+
+def store(connection: Connection, document: bytes, digest: str, now: datetime) -> None:
+    """Keep the document under its digest, once."""
+    if connection.execute(select(plans.c.digest).where(plans.c.digest == digest)).scalar() is None:
+        statement = insert(plans).on_conflict_do_nothing(index_elements=["digest"])
+        connection.execute(statement, {"digest": digest, "document": document.decode(), "created_at": now})
+
+
+def load(connection: Connection, digest: str) -> str:
+    """The document; a job's plan is always there."""
+    return connection.execute(select(plans.c.document).where(plans.c.digest == digest)).scalar_one()

@@ -1,0 +1,182 @@
+"""The tables, the same on SQLite and PostgreSQL. Names of constraints follow one convention, so migrations find them.
+
+The jobs table is the truth about every job; the queue only carries ids. Times are integer microseconds since 1970 UTC,
+documents are canonical JSON text, columns of numbers are little-endian float64: all exact on both engines.
+"""
+
+from datetime import datetime
+from enum import StrEnum
+from typing import Any
+
+from sqlalchemy import (
+    BigInteger,
+    CheckConstraint,
+    Column,
+    Dialect,
+    ForeignKey,
+    Index,
+    Integer,
+    LargeBinary,
+    MetaData,
+    String,
+    Table,
+    Text,
+    TypeDecorator,
+    UniqueConstraint,
+)
+
+from service.store.clock import from_microseconds, to_microseconds
+
+metadata = MetaData(
+    naming_convention={
+        "ix": "ix_%(table_name)s_%(column_0_N_name)s",
+        "uq": "uq_%(table_name)s_%(column_0_N_name)s",
+        "ck": "ck_%(table_name)s_%(constraint_name)s",
+        "fk": "fk_%(table_name)s_%(column_0_N_name)s_%(referred_table_name)s",
+        "pk": "pk_%(table_name)s",
+    }
+)
+
+
+class State(StrEnum):
+    """Where a job is. `succeeded`, `failed` and `cancelled` are final."""
+
+    QUEUED = "queued"
+    """Waits for a worker, perhaps until `run_after`."""
+    RUNNING = "running"
+    """Held by the worker that knows `token`, until `lease_until` unless renewed."""
+    SUCCEEDED = "succeeded"
+    """Has a result and a verdict."""
+    FAILED = "failed"
+    """Has an error; its dataset, plan and attempts are kept."""
+    CANCELLED = "cancelled"
+    """Was called off before it ended."""
+
+
+FINAL = (State.SUCCEEDED, State.FAILED, State.CANCELLED)
+
+
+class Instant(TypeDecorator[datetime]):
+    """An aware datetime kept as integer microseconds."""
+
+    impl = BigInteger
+    cache_ok = True
+
+    def process_bind_param(self, value: datetime | None, dialect: Dialect) -> Any:  # noqa: ARG002 (SQLAlchemy's form)
+        """To the database."""
+        return None if value is None else to_microseconds(value)
+
+    def process_result_value(self, value: Any, dialect: Dialect) -> datetime | None:  # noqa: ARG002
+        """From the database."""
+        return None if value is None else from_microseconds(value)
+
+
+Serial = BigInteger().with_variant(Integer(), "sqlite")
+Id = String(36)
+Digest = String(64)
+
+datasets = Table(
+    "datasets",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("digest", Digest, nullable=False, unique=True),
+    Column("subject", Text, nullable=False),
+    Column("created_at", Instant, nullable=False),
+    Column("points", Integer, nullable=False),
+    Column("summary", Text, nullable=False),  # JSON: ranges, levels, which columns there are
+    Column("details", Text, nullable=False),  # JSON: title, quantities, units, tags, ...
+    Column("series", Text),  # JSON list of labels
+    Column("x", LargeBinary, nullable=False),
+    Column("y", LargeBinary, nullable=False),
+    Column("u_x", LargeBinary),
+    Column("u_y", LargeBinary),
+    Index(None, "subject", "id"),
+)
+
+plans = Table(
+    "plans",
+    metadata,
+    Column("digest", Digest, primary_key=True),
+    Column("document", Text, nullable=False),
+    Column("created_at", Instant, nullable=False),
+)
+
+jobs = Table(
+    "jobs",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("state", String(16), nullable=False),
+    Column("dataset_id", Id, ForeignKey(datasets.c.id), nullable=False),
+    Column("plan_digest", Digest, ForeignKey(plans.c.digest), nullable=False),
+    Column("subject", Text, nullable=False),
+    Column("submitted_by", Text, nullable=False),
+    Column("priority", Integer, nullable=False),
+    Column("queued_at", Instant, nullable=False),
+    Column("run_after", Instant, nullable=False),  # not before this moment
+    Column("dispatched_at", Instant, nullable=False),  # when its id last went to the queue
+    Column("attempts", Integer, nullable=False),
+    Column("token", Id),  # fencing: only who knows it may renew or finish
+    Column("lease_until", Instant),
+    Column("worker", Text),
+    Column("started_at", Instant),  # of the last attempt
+    Column("finished_at", Instant),
+    Column("stage", Text),
+    Column("stage_done", Integer),
+    Column("stage_of", Integer),
+    Column("error", Text),  # JSON: code, message, errors
+    Column("verdict", String(16)),
+    Column("chosen_degree", Integer),
+    CheckConstraint("state IN ('queued', 'running', 'succeeded', 'failed', 'cancelled')", name="state_known"),
+    CheckConstraint("state <> 'running' OR (token IS NOT NULL AND lease_until IS NOT NULL)", name="running_is_held"),
+    Index(None, "state", "run_after"),
+    Index(None, "subject", "id"),
+    Index(None, "submitted_by", "id"),
+    Index(None, "verdict", "id"),
+    Index(None, "dataset_id"),
+)
+
+job_events = Table(
+    "job_events",
+    metadata,
+    Column("id", Serial, primary_key=True, autoincrement=True),
+    Column("job_id", Id, ForeignKey(jobs.c.id), nullable=False),
+    Column("at", Instant, nullable=False),
+    Column("kind", String(16), nullable=False),
+    Column("detail", Text, nullable=False),  # JSON
+    Index(None, "job_id", "id"),
+)
+
+results = Table(
+    "results",
+    metadata,
+    Column("job_id", Id, ForeignKey(jobs.c.id), primary_key=True),
+    Column("digest", Digest, nullable=False),
+    Column("document", Text, nullable=False),  # canonical JSON of what the core computed
+    Column("provenance", Text, nullable=False),  # JSON
+)
+
+verdicts = Table(
+    "verdicts",
+    metadata,
+    Column("sequence", BigInteger, primary_key=True, autoincrement=False),  # gapless, in order of issue
+    Column("job_id", Id, ForeignKey(jobs.c.id), nullable=False),
+    Column("subject", Text, nullable=False),
+    Column("verdict", String(16), nullable=False),
+    Column("issued_at", Instant, nullable=False),
+    Column("digest", Digest, nullable=False),
+    Column("previous", Digest),
+    Column("document", Text, nullable=False),  # canonical JSON; `digest` is its SHA-256
+    UniqueConstraint("job_id"),
+    UniqueConstraint("digest"),
+    Index(None, "subject", "sequence"),
+)
+
+# One row, the end of the chain of verdicts. Updating it locks it, which orders the issuers on PostgreSQL.
+verdict_chain = Table(
+    "verdict_chain",
+    metadata,
+    Column("id", Integer, primary_key=True, autoincrement=False),
+    Column("length", BigInteger, nullable=False),
+    Column("head", Digest),
+    CheckConstraint("id = 1", name="one_row"),
+)

@@ -1,0 +1,61 @@
+"""Results and verdicts. Verdicts form one chain: each document carries the digest of the one issued before it."""
+
+from collections.abc import Callable
+from datetime import datetime
+from typing import Any
+
+from sqlalchemy import Connection, insert, select, update
+
+from service.store.codec import canonical, digest
+from service.store.records import VerdictRecord
+from service.store.tables import results, verdict_chain, verdicts
+
+
+def add_result(connection: Connection, job_id: str, *, document: bytes, digest_: str, provenance: bytes) -> None:
+    """Keep what a job computed."""
+    row = {
+        "job_id": job_id,
+        "digest": digest_,
+        "document": document.decode(),
+        "provenance": provenance.decode(),
+    }
+    connection.execute(insert(results), row)
+
+
+def issue(
+    connection: Connection,
+    job_id: str,
+    *,
+    subject: str,
+    verdict: str,
+    now: datetime,
+    document: Callable[[str | None], dict[str, Any]],
+) -> VerdictRecord:
+    """Append one verdict to the chain; `document` builds it from the digest of the one before.
+
+    Call it last in a transaction: on PostgreSQL the chain's row stays locked until the commit.
+    """
+    end = update(verdict_chain).where(verdict_chain.c.id == 1)
+    taken = end.values(length=verdict_chain.c.length + 1).returning(verdict_chain.c.length, verdict_chain.c.head)
+    sequence, previous = connection.execute(taken).one()
+    body = canonical(document(previous))
+    row = {
+        "sequence": sequence,
+        "job_id": job_id,
+        "subject": subject,
+        "verdict": verdict,
+        "issued_at": now,
+        "digest": digest(body),
+        "previous": previous,
+        "document": body.decode(),
+    }
+    connection.execute(insert(verdicts), row)
+    connection.execute(end.values(head=row["digest"]))
+    return VerdictRecord(digest=row["digest"], document=row["document"])
+
+
+def of_job(connection: Connection, job_id: str) -> VerdictRecord | None:
+    """The verdict that a job ended with."""
+    query = select(verdicts.c.digest, verdicts.c.document).where(verdicts.c.job_id == job_id)
+    row = connection.execute(query).mappings().first()
+    return None if row is None else VerdictRecord(**row)
