@@ -152,7 +152,9 @@ def _rule_steps(chosen: RuleChoice) -> list[Step]:
         "aicc": "the lowest AICc",
         "bic": "the lowest BIC",
     }[chosen.rule]
-    words = f"Degree {chosen.degree} has {how}." if chosen.reason is None else f"Degree {chosen.degree}: {chosen.reason}."
+    words = (
+        f"Degree {chosen.degree} has {how}." if chosen.reason is None else f"Degree {chosen.degree}: {chosen.reason}."
+    )
     return [
         Step(
             action="pick",

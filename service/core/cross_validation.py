@@ -44,9 +44,7 @@ def leave_one_out_errors(fits: NestedFits) -> Floats:
         return np.where(spare > SINGULAR, fits.residuals / spare, np.nan)
 
 
-def cross_validate(
-    fits: NestedFits, folds: Folds, progress: Callable[[int, int], None] | None = None
-) -> HeldOut:
+def cross_validate(fits: NestedFits, folds: Folds, progress: Callable[[int, int], None] | None = None) -> HeldOut:
     """Hold out every fold once; all degrees 0..top."""
     f, d = len(folds.members), fits.top + 1
     sse, training = np.empty((f, d)), np.empty((f, d))

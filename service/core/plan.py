@@ -95,9 +95,7 @@ class Plan:
             if not good:
                 bad.append(FieldError(pointer, message))
 
-        check(
-            least <= self.min_degree <= HIGHEST_DEGREE, "/min_degree", f"must be from {least} to {HIGHEST_DEGREE}"
-        )
+        check(least <= self.min_degree <= HIGHEST_DEGREE, "/min_degree", f"must be from {least} to {HIGHEST_DEGREE}")
         check(
             self.min_degree <= self.max_degree <= HIGHEST_DEGREE,
             "/max_degree",
@@ -138,9 +136,7 @@ def _requirement_errors(asked: Requirements) -> list[FieldError]:
             bad.append(FieldError(f"{at}/back_calculated/limit_percent", "must be greater than 0"))
         lowest = back.limit_percent_lowest
         if lowest is not None and not lowest >= back.limit_percent:
-            bad.append(
-                FieldError(f"{at}/back_calculated/limit_percent_lowest", "must be at least limit_percent")
-            )
+            bad.append(FieldError(f"{at}/back_calculated/limit_percent_lowest", "must be at least limit_percent"))
         if not 0 < back.min_share <= 1:
             bad.append(FieldError(f"{at}/back_calculated/min_share", "must be greater than 0 and at most 1"))
     return bad

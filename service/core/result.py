@@ -154,9 +154,12 @@ class Decision:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class PowerBasis:
-    """y = sum of coefficients[k] x^k. `digits`: correct significant digits of the worst coefficient."""
+    """y = sum of coefficients[k] x^k. `digits`: correct significant digits of the worst coefficient.
 
-    coefficients: tuple[float, ...]
+    A coefficient is None only where no double can hold it (units too far from 1).
+    """
+
+    coefficients: tuple[float | None, ...]
     standard_errors: tuple[float | None, ...]
     t: tuple[float | None, ...]
     p: tuple[float | None, ...]

@@ -16,7 +16,9 @@ def other_rule(rule: Rule, fits: NestedFits, held: HeldOut, min_degree: int) -> 
     """What `rule` (any but `least_bend`) chooses among degrees min_degree..top."""
     exact = exact_degree(fits, min_degree)
     if exact is not None:
-        return RuleChoice(rule=rule, degree=exact, reason="the least degree whose residuals are at the level of rounding")
+        return RuleChoice(
+            rule=rule, degree=exact, reason="the least degree whose residuals are at the level of rounding"
+        )
     if rule in ("aicc", "bic"):
         return _least(rule, (aicc if rule == "aicc" else bic)(fits), min_degree)
     if rule == "lowest_cv":

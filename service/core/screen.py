@@ -91,15 +91,11 @@ def choose_with_screen(fits: NestedFits, *, known_uncertainty: bool, screen: boo
         top = min(fits.top, np.unique(x).size - (1 if fits.intercept else 0), x.size - (2 if fits.intercept else 1))
         if top < 1:
             break
-        aside.append(
-            SetAside(point=int(kept[place]), degree=degree, studentised=value, p_bonferroni=p_bonferroni)
-        )
+        aside.append(SetAside(point=int(kept[place]), degree=degree, studentised=value, p_bonferroni=p_bonferroni))
         kept = kept[keep]
         current = fit_all(x, current.y[keep], current.weights[keep], top=top, intercept=fits.intercept)
         looks_without = _walk(current, known_uncertainty)[3]
-    return Walked(
-        looks=looks, aside=tuple(aside), looks_without=looks_without, p=p, factors=factors, ratios=ratios
-    )
+    return Walked(looks=looks, aside=tuple(aside), looks_without=looks_without, p=p, factors=factors, ratios=ratios)
 
 
 def _walk(fits: NestedFits, known_uncertainty: bool) -> tuple[Floats, Floats, Floats, list[Look]]:

@@ -39,7 +39,9 @@ def weigh(observations: Observations, plan: Plan, *, top: int) -> Weighted:
         return _from_uncertainty(observations, plan, top)
     if asked == "auto":
         return _compare(observations, plan, top)
-    fits = fit_all(observations.x, observations.y, power_weights(observations.x, asked), top=top, intercept=plan.intercept)
+    fits = fit_all(
+        observations.x, observations.y, power_weights(observations.x, asked), top=top, intercept=plan.intercept
+    )
     choice = WeightChoice(asked=asked, used=asked, common_degree=None, compared=(), why="as the plan asks")
     return Weighted(fits=fits, choice=choice, walked=None, absolute=False)
 
@@ -79,7 +81,9 @@ def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
         choice = WeightChoice(asked="auto", used="equal", common_degree=None, compared=(), why=why)
         return Weighted(fits=equal, choice=choice, walked=None, absolute=False)
     names = ("equal", "1/x", "1/x^2")
-    all_fits = [equal] + [fit_all(x, y, power_weights(x, name), top=top, intercept=plan.intercept) for name in names[1:]]
+    all_fits = [equal] + [
+        fit_all(x, y, power_weights(x, name), top=top, intercept=plan.intercept) for name in names[1:]
+    ]
     walks = [choose_with_screen(fits, known_uncertainty=False) for fits in all_fits]
     least = 0 if plan.intercept else 1
     common = min(max(least, *(w.degree for w in walks)), *(f.top for f in all_fits))

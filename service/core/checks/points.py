@@ -1,0 +1,146 @@
+"""Warnings about single points and about where the points lie."""
+
+import numpy as np
+
+from service.core.findings import Findings
+from service.core.result import Evidence, Warning
+
+OUTLIER = 0.01
+OUTLIER_SERIOUS = 1e-4
+COOK_NOTE = 1.0
+LEVERAGE_CAUTION = 0.95
+GAP_CAUTION = 2.0  # the curve in the gap is twice as uncertain as one reading
+OUTSIDE_SHARE = 0.05  # of the range asked for, beyond the outermost points
+
+
+def suspect_point(found: Findings) -> Warning | None:
+    """A reading far from the curve of the others, or one whose absence changes the choice."""
+    aside = tuple(a.point for a in found.choice.walked.aside) if found.plan.rule == "least_bend" else ()
+    changed = bool(aside) and found.choice.walked.degree != found.choice.walked.degree_with_all
+    largest = found.diagnostics.largest_studentised
+    worst = found.diagnostics.largest_studentised_point
+    out = largest.p is not None and largest.p < OUTLIER
+    if not out and not changed:
+        return None
+    points = list(aside) if aside else []
+    if out and worst is not None and worst not in points:
+        points.append(worst)
+    named = ", ".join(f"{i + 1} (x = {found.observations.x[i]:g})" for i in points)
+    cook = found.cooks[worst] if worst is not None else np.nan
+    serious = changed or (
+        largest.p is not None and largest.p < OUTLIER_SERIOUS and bool(np.isnan(cook) or cook > COOK_NOTE)
+    )
+    message = f"Point {named} does not belong with the others" if len(points) == 1 else (
+        f"Points {named} do not belong with the others"
+    )
+    message += (
+        f"; without it the degree is {found.choice.walked.degree}, with it {found.choice.walked.degree_with_all}. The "
+        "degree was chosen without it, but the fitted curve still holds it. "
+        if changed
+        else " and pulls the curve. " if serious else ". "
+    )
+    message += (
+        "Check the reading and the standard used; repeat that level. Remove it only for a cause you can write down, and "
+        "post the dataset again."
+    )
+    return Warning(
+        code="suspect_point",
+        severity="serious" if serious else "caution",
+        message=message,
+        evidence=Evidence(
+            statistic=largest.statistic, df=largest.df, p=largest.p, threshold=OUTLIER, points=tuple(points)
+        ),
+        method="largest externally studentised residual, Bonferroni p (Cook & Weisberg 1982, 2.2.2)",
+    )
+
+
+def point_rules_fit(found: Findings) -> Warning | None:
+    """One point alone decides part of the curve."""
+    leverage = found.full.leverage[:, found.degree]
+    strongest = int(np.argmax(leverage))
+    cooks = np.where(np.isnan(found.cooks), -1.0, found.cooks)
+    moving = tuple(int(i) for i in np.flatnonzero(cooks > COOK_NOTE))
+    ruled = float(leverage[strongest]) > LEVERAGE_CAUTION
+    if not ruled and not moving:
+        return None
+    point = strongest if ruled else int(np.argmax(cooks))
+    x = found.observations.x[point]
+    message = (
+        f"Point {point + 1} (x = {x:g}) stands alone: the curve goes through it whatever it reads, so an error there "
+        "goes unnoticed into every later value. Repeat that level or add one near it."
+        if ruled
+        else f"Point {point + 1} (x = {x:g}) moves the whole curve by more than its uncertainty. Repeat that level."
+    )
+    return Warning(
+        code="point_rules_fit",
+        severity="caution" if ruled else "note",
+        message=message,
+        evidence=Evidence(
+            statistic=float(leverage[strongest]) if ruled else float(cooks[point]),
+            threshold=LEVERAGE_CAUTION if ruled else COOK_NOTE,
+            points=(point,) if ruled else moving,
+        ),
+        method="leverage" if ruled else "Cook's distance (Cook, Technometrics 19 (1977) 15)",
+    )
+
+
+def few_spare_points(found: Findings) -> Warning | None:
+    """Too little left over to judge the fit by."""
+    df = found.curve.degrees_of_freedom
+    spare_levels = found.observations.levels - found.full.columns(found.degree)
+    if df >= 5 and spare_levels >= 2 and found.observations.n > 8:
+        return None
+    thin = df < 3 or spare_levels < 1
+    return Warning(
+        code="few_spare_points",
+        severity="caution" if thin else "note",
+        message=(
+            f"{found.observations.n} points at {found.observations.levels} levels leave {df} to spare after degree "
+            f"{found.degree}: the scatter, and with it every uncertainty, is known only roughly, and a further bend "
+            "could not be seen. Add levels rather than repeats."
+        ),
+        evidence=Evidence(value=float(df), statistic=float(spare_levels), threshold=3.0),
+        method="residual degrees of freedom and levels beyond the number of coefficients",
+    )
+
+
+def wide_gap(found: Findings) -> Warning | None:
+    """A stretch of the range in which no point holds the curve; or a range asked for beyond the points."""
+    method = "root of the largest prediction variance over the range to that of a single reading"
+    asked = found.plan.working_range
+    if asked is not None:
+        lo, hi = found.full.domain
+        outside = max(lo - asked[0], asked[1] - hi, 0.0)
+        if outside > OUTSIDE_SHARE * (asked[1] - asked[0]):
+            return Warning(
+                code="wide_gap",
+                severity="caution",
+                message=(
+                    f"The working range asked for, {asked[0]:g} to {asked[1]:g}, goes beyond the points, {lo:g} to {hi:g}. "
+                    "Everything here holds between the points only; nothing is known beyond them. Add levels at the ends."
+                ),
+                evidence=Evidence(value=outside, threshold=OUTSIDE_SHARE * (asked[1] - asked[0])),
+                method="range of the points against the working range",
+            )
+    here = float(found.gap_ratios[found.degree])
+    above = float(found.gap_ratios[min(found.degree + 1, found.full.top)])
+    if max(here, above) <= GAP_CAUTION:
+        return None
+    level_x = found.observations.level_x
+    gap = int(np.argmax(np.diff(level_x)))
+    message = (
+        f"Between x = {level_x[gap]:g} and {level_x[gap + 1]:g} no point holds the curve"
+        + (
+            ": there it is less certain than a single reading. "
+            if here > GAP_CAUTION
+            else "; a further bend there would show late or never. "
+        )
+        + "Add a level in the gap."
+    )
+    return Warning(
+        code="wide_gap",
+        severity="caution" if here > GAP_CAUTION else "note",
+        message=message,
+        evidence=Evidence(statistic=max(here, above), value=float(level_x[gap + 1] - level_x[gap]), threshold=GAP_CAUTION),
+        method=method,
+    )

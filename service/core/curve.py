@@ -1,0 +1,156 @@
+"""The chosen curve: coefficients in both bases, their uncertainty, slope and monotonicity."""
+
+import math
+from fractions import Fraction
+
+import numpy as np
+from numpy.polynomial import chebyshev
+
+from service.core.exact import ExactFit, exact_fit
+from service.core.nested import EPS, NestedFits
+from service.core.observations import Floats
+from service.core.result import Curve, PowerBasis, Test
+from service.core.tails import f_tail, t_two_sided, z_two_sided
+
+DIGITS_OF_A_DOUBLE = 15
+
+
+def describe_curve(fits: NestedFits, degree: int, *, absolute: bool) -> tuple[Curve, ExactFit | None]:
+    """The curve of one degree. With absolute weights (`known_uncertainty`) the variance is 1, not RSS/df."""
+    exact = exact_fit(fits.x, fits.y, fits.weights, degree, intercept=fits.intercept)
+    coefficients = np.array(exact.chebyshev) if exact else fits.chebyshev(degree)
+    df = fits.df(degree)
+    rss = exact.rss if exact else float(fits.rss[degree])
+    variance = rss / df if df > 0 else None
+    if absolute:
+        variance = 1.0
+    covariance = None
+    if variance is not None:
+        covariance = tuple(tuple(row) for row in (fits.unscaled_covariance(degree) * variance).tolist())
+    tss = fits.tss if fits.intercept else float(np.sum(fits.weights * fits.y**2))
+    r2 = exact.r2 if exact else (1 - rss / tss if tss > 0 else None)
+    curve = Curve(
+        basis="chebyshev",
+        domain=fits.domain,
+        coefficients=tuple(coefficients.tolist()),
+        covariance=covariance,
+        power=_exact_power(exact, rss, df, absolute) if exact else _rounded_power(fits, degree, variance, df, absolute),
+        residual_sd=math.sqrt(rss / df) if df > 0 else None,
+        degrees_of_freedom=df,
+        r2=r2,
+        f=_overall(fits, degree, rss, tss, exact),
+    )
+    return curve, exact
+
+
+def _overall(fits: NestedFits, degree: int, rss: float, tss: float, exact: ExactFit | None) -> Test:
+    df = fits.df(degree)
+    if degree == 0:
+        return Test(f=None, df=(0, df), p=None, reason="degree 0 explains nothing")
+    if rss <= fits.rounding_rss:
+        if tss <= fits.rounding_rss:
+            return Test(f=None, df=(degree, df), p=None, reason="y is constant")
+        return Test(f=None, df=(degree, df), p=0.0, reason="the residuals are at the level of rounding")
+    f = exact.f if exact and exact.f is not None else (tss - rss) / degree / (rss / df)
+    return Test(f=f, df=(degree, df), p=float(f_tail(f, degree, df)))
+
+
+def _exact_power(exact: ExactFit, rss: float, df: int, absolute: bool) -> PowerBasis:
+    sd, t = exact.power_sd, exact.t
+    if absolute and rss > 0:
+        root = math.sqrt(rss / df)
+        sd = tuple(None if v is None else v / root for v in sd)
+        t = tuple(None if v is None else v * root for v in t)
+    representable = all(v is not None for v in exact.power)
+    return PowerBasis(
+        coefficients=exact.power,
+        standard_errors=sd,
+        t=t,
+        p=tuple(None if v is None else float(z_two_sided(v) if absolute else t_two_sided(v, df)) for v in t),
+        digits=DIGITS_OF_A_DOUBLE if representable else 0,
+        method="exact integer arithmetic, each coefficient rounded once"
+        + ("" if representable else "; null where no double can hold the value: use the Chebyshev coefficients"),
+    )
+
+
+def _rounded_power(fits: NestedFits, degree: int, variance: float | None, df: int, absolute: bool) -> PowerBasis:
+    """From the QR, converted without further rounding, with an estimate of the digits that are left."""
+    matrix = _power_matrix(fits.domain, degree)
+    c = [Fraction(v) for v in fits.chebyshev(degree).tolist()]
+    exact_values = [sum((a * b for a, b in zip(row, c, strict=True)), Fraction(0)) for row in matrix]
+    size = np.array([[abs(float(a)) for a in row] for row in matrix])
+    m = np.array([[float(a) for a in row] for row in matrix])
+    unit = fits.unscaled_covariance(degree)
+    root_w_y = float(np.sqrt(np.sum(fits.weights * fits.y**2)))
+    error = size @ np.sqrt(np.diag(unit)) * (4 * EPS * root_w_y)
+    digits = DIGITS_OF_A_DOUBLE
+    for value, off in zip(exact_values, error, strict=True):
+        if value != 0 and off > 0:
+            digits = min(digits, math.floor(-math.log10(min(1.0, off / abs(float(value))))))
+    se = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", m, unit, m), 0) * (variance or 0.0))
+    t = [float(v) / s if s > 0 else None for v, s in zip(exact_values, se.tolist(), strict=True)]
+    return PowerBasis(
+        coefficients=tuple(float(v) for v in exact_values),
+        standard_errors=tuple(s if variance is not None and s > 0 else None for s in se.tolist()),
+        t=tuple(t),
+        p=tuple(None if v is None else float(z_two_sided(v) if absolute else t_two_sided(v, df)) for v in t),
+        digits=digits,
+        method="Chebyshev QR, converted exactly; digits estimated from its error bound",
+    )
+
+
+def _power_matrix(domain: tuple[float, float], degree: int) -> list[list[Fraction]]:
+    """Row k: the coefficient of x^k in each T_j(t)."""
+    lo, hi = Fraction(domain[0]), Fraction(domain[1])
+    a, b = -(lo + hi) / (hi - lo), Fraction(2) / (hi - lo)  # t = a + b x
+    polys: list[list[Fraction]] = [[Fraction(1)], [a, b]]
+    for _ in range(2, degree + 1):
+        last, before = polys[-1], polys[-2]
+        new = [Fraction(0)] * (len(last) + 1)
+        for k, v in enumerate(last):
+            new[k] += 2 * a * v
+            new[k + 1] += 2 * b * v
+        for k, v in enumerate(before):
+            new[k] -= v
+        polys.append(new)
+    return [[p[k] if k < len(p) else Fraction(0) for p in polys[: degree + 1]] for k in range(degree + 1)]
+
+
+def to_t(x: Floats | float, domain: tuple[float, float]) -> Floats:
+    """t in [-1, 1] over the domain."""
+    lo, hi = domain
+    return np.asarray(((x - lo) + (x - hi)) / (hi - lo))
+
+
+def value_at(coefficients: Floats, domain: tuple[float, float], x: Floats | float) -> Floats:
+    """The curve at x."""
+    return np.asarray(chebyshev.chebval(to_t(x, domain), coefficients))
+
+
+def slope_range(
+    coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]
+) -> tuple[float, float, float]:
+    """Least and greatest slope dy/dx over the working range, and the x of the least |slope|.
+
+    The extremes of p' lie at the ends or at real roots of p''; the roots are found, not sampled.
+    """
+    lo, hi = domain
+    first = chebyshev.chebder(coefficients) * (2 / (hi - lo))
+    ends = to_t(np.array(working_range), domain)
+    places = [float(ends[0]), float(ends[1])]
+    second = np.trim_zeros(chebyshev.chebder(first), "b") if first.size > 1 else np.zeros(0)
+    if second.size > 1:
+        roots = chebyshev.chebroots(second)
+        real = roots[np.abs(roots.imag) < 1e-7 * (1 + np.abs(roots.real))].real
+        places += [float(r) for r in real if ends[0] < r < ends[1]]
+    slopes = chebyshev.chebval(np.array(places), first)
+    flattest = int(np.argmin(np.abs(slopes)))
+    at = (lo + hi) / 2 + places[flattest] * (hi - lo) / 2
+    return float(slopes.min()), float(slopes.max()), at
+
+
+def is_monotonic(coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]) -> bool:
+    """Strictly monotonic: the slope keeps one sign, zero excluded up to rounding."""
+    least, greatest, _ = slope_range(coefficients, domain, working_range)
+    tiny = 1e-13 * max(abs(least), abs(greatest))
+    return greatest > 0 and least > tiny or least < 0 and greatest < -tiny

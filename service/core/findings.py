@@ -1,0 +1,65 @@
+"""Everything found about the chosen fit, in one place, for the warnings, requirements and verdict."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from service.core.choice import Choice
+from service.core.cross_validation import HeldOut
+from service.core.nested import NestedFits
+from service.core.observations import Floats, Observations
+from service.core.plan import Plan
+from service.core.result import Curve, Diagnostics, Test
+from service.core.unseen import Unseen
+from service.core.weighting import Weighted
+
+
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class Findings:
+    """What the analysis knows when it comes to judge.
+
+    full: fits as high as the data allow (three terms above the plan's limit at most); tried: the same
+    up to the plan's limit. studentised, cooks: at the chosen degree, NaN where undefined.
+    coefficients: of the chosen curve on T_j; slope: least, greatest and x of the flattest place.
+    """
+
+    observations: Observations
+    plan: Plan
+    working_range: tuple[float, float]
+    weighted: Weighted
+    full: NestedFits
+    tried: NestedFits
+    held: HeldOut
+    choice: Choice
+    curve: Curve
+    coefficients: Floats
+    monotonic: bool
+    slope: tuple[float, float, float]
+    diagnostics: Diagnostics
+    studentised: Floats
+    cooks: Floats
+    lack_of_fit: Sequence[Test | None]
+    unseen: Unseen
+    gap_ratios: Floats
+
+    @property
+    def degree(self) -> int:
+        """The chosen degree."""
+        return self.choice.degree
+
+    @property
+    def exact(self) -> bool:
+        """Whether the residuals of the chosen fit are at the level of rounding."""
+        return bool(self.full.rss[self.degree] <= self.full.rounding_rss)
+
+    @property
+    def least_slope(self) -> float | None:
+        """Smallest |dy/dx| in the working range; None where the curve is not monotonic."""
+        return min(abs(self.slope[0]), abs(self.slope[1])) if self.monotonic else None
+
+    @property
+    def in_range(self) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+        """Which points lie in the working range."""
+        x, (lo, hi) = self.observations.x, self.working_range
+        return np.asarray((x >= lo) & (x <= hi))

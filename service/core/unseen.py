@@ -1,0 +1,79 @@
+"""Unseen bend: the largest error that a term too small for these data to show could still cause."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from service.core.nested import NestedFits
+from service.core.observations import Floats
+from service.core.result import UnseenBend, UnseenTerm
+from service.core.tails import t_quantile, z_quantile
+
+TERMS = 3
+BOUND = 0.95
+GRID = 201
+METHOD = (
+    "upper 95 % bound of each of the next terms (orthonormal polynomial), times its largest value in the working "
+    "range; root of the sum of squares"
+)
+
+
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class Unseen:
+    """The unseen bend, and its profile: `profile(x)` bounds the bend at each x, in the unit of y."""
+
+    bend: UnseenBend
+    bounds: Floats
+    first_column: int
+    fits: NestedFits
+
+    def profile(self, x: Floats) -> Floats:
+        """Root of the sum of squares of the bounded terms at x: (len(x),)."""
+        if self.bounds.size == 0:
+            return np.full(x.shape, np.nan)
+        last = self.first_column + self.bounds.size
+        shapes = self.fits.orthonormal_at(x)[:, self.first_column : last]
+        return np.sqrt(np.sum((shapes * self.bounds) ** 2, axis=1))
+
+
+def unseen_bend(
+    fits: NestedFits, degree: int, working_range: tuple[float, float], *, least_slope: float | None, absolute: bool
+) -> Unseen:
+    """Bound the next terms above `degree`. least_slope: smallest |dy/dx| in the range, None if not monotonic."""
+    first = fits.columns(degree)
+    bounds: list[float] = []
+    terms: list[UnseenTerm] = []
+    grid = np.linspace(working_range[0], working_range[1], GRID)
+    shapes = np.abs(fits.orthonormal_at(grid)).max(axis=0)
+    for j in range(degree + 1, min(degree + TERMS, fits.top) + 1):
+        column = fits.columns(j) - 1
+        b, df = float(fits.qty[column]), fits.df(j)
+        se = 1.0 if absolute else float(np.sqrt(max(float(fits.rss[j]), fits.rounding_rss) / df))
+        quantile = z_quantile(BOUND) if absolute else t_quantile(BOUND, df)
+        bound = abs(b) + quantile * se
+        bounds.append(bound)
+        terms.append(
+            UnseenTerm(
+                degree=j,
+                coefficient=b,
+                standard_error=se,
+                upper_bound=bound,
+                largest_effect=bound * float(shapes[column]),
+            )
+        )
+    if not terms:
+        reason = "the data can estimate no term above the chosen degree"
+        bend = UnseenBend(y=None, x=None, in_single_readings=None, terms=(), method=METHOD, reason=reason)
+        return Unseen(bend=bend, bounds=np.zeros(0), first_column=first, fits=fits)
+    y = float(np.sqrt(sum(t.largest_effect**2 for t in terms)))
+    sd = 1.0 if absolute else float(np.sqrt(max(float(fits.rss[degree]), fits.rounding_rss) / fits.df(degree)))
+    single = sd / float(np.sqrt(fits.weights.min()))
+    bend = UnseenBend(
+        y=y,
+        x=y / least_slope if least_slope else None,
+        in_single_readings=y / single if single > 0 else None,
+        terms=tuple(terms),
+        method=METHOD,
+        reason=None if least_slope else "in x it has no bound, since the curve is not monotonic",
+    )
+    return Unseen(bend=bend, bounds=np.array(bounds), first_column=first, fits=fits)
