@@ -18,7 +18,9 @@ def check(observations: Observations, plan: Plan) -> None:
         bad.append(FieldError("/dataset/x", "all values are equal: no curve can be fitted"))
     elif distinct < needed:
         kind = "distinct values" if plan.intercept else "distinct values other than 0"
-        bad.append(FieldError("/dataset/x", f"needs at least {needed} {kind} for min_degree {plan.min_degree}, has {distinct}"))
+        bad.append(
+            FieldError("/dataset/x", f"needs at least {needed} {kind} for min_degree {plan.min_degree}, has {distinct}")
+        )
     elif o.n < needed + 1:
         bad.append(
             FieldError("/dataset/x", f"needs at least {needed + 1} points for min_degree {plan.min_degree}, has {o.n}")
@@ -40,6 +42,8 @@ def check(observations: Observations, plan: Plan) -> None:
         elif min(hi, float(o.x.max())) <= max(lo, float(o.x.min())):
             bad.append(FieldError("/plan/working_range", "shares no more than one value of x with the data"))
     if plan.resampling.scheme == "leave_series_out" and len(set(o.series or ())) < 2:
-        bad.append(FieldError("/plan/resampling/scheme", "is leave_series_out, but the dataset names fewer than 2 series"))
+        bad.append(
+            FieldError("/plan/resampling/scheme", "is leave_series_out, but the dataset names fewer than 2 series")
+        )
     if bad:
         raise InvalidInput(bad)

@@ -200,7 +200,7 @@ def _picks_without_folds(fits: NestedFits, rss: Floats, size: Floats, plan: Plan
     columns = np.array([fits.columns(d) for d in range(fits.top + 1)], dtype=np.float64)
     if plan.rule == "least_bend":
         p = term_p_values(rss, size[:, None] - columns, fits.rounding_rss, known_uncertainty=plan.known_uncertainty)
-        return walk_many(p, walked.factors, size).astype(np.intp)
+        return walk_many(p, walked.factors, size)
     k = columns + 1
     floor = np.maximum(rss, fits.rounding_rss + 1e-300)
     score = size[:, None] * np.log(floor / size[:, None])

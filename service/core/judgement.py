@@ -70,9 +70,8 @@ def _undecided(found: Findings, answers: Sequence[RequirementAnswer], advice: li
             continue
         said.add(limit.words)
         plans = settle_bend(found, limit)
-        message = (
-            f"A bend too small for these data to show could still reach {ratio:.2g} times {limit.words}."
-            + (f" {plans[0].message}" if plans else " No small number of further readings would settle it.")
+        message = f"A bend too small for these data to show could still reach {ratio:.2g} times {limit.words}." + (
+            f" {plans[0].message}" if plans else " No small number of further readings would settle it."
         )
         reasons.append(Reason(code="bend_may_hide", severity="caution", message=message))
         advice.extend(plans)

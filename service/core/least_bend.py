@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from service.core.nested import NestedFits
-from service.core.observations import Floats
+from service.core.observations import Floats, Integers
 from service.core.tails import f_tail, z_two_sided
 
 SHARES = (0.70, 0.20, 0.07, 0.03)  # of a(n), for a look 1, 2, 3, 4 terms ahead
@@ -101,7 +101,7 @@ def walk(p: Sequence[float], factors: Sequence[float], n: int) -> list[Look]:
         d = found
 
 
-def walk_many(p: Floats, factors: Floats, n: Floats) -> Floats:
+def walk_many(p: Floats, factors: Floats, n: Floats) -> Integers:
     """`walk` for many datasets at once: p (m, top+1), factors (top+1,), n (m,) -> chosen degrees (m,)."""
     m, size = p.shape
     a = np.minimum(0.06, 0.2 / np.sqrt(n))

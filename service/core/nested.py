@@ -61,7 +61,9 @@ class NestedFits:
 
     def orthonormal_at(self, x: Floats) -> Floats:
         """The polynomials whose weighted values at the data are the columns of q, at x: (len(x), p)."""
-        return np.asarray(solve_triangular(self.r, self.basis_at(x).T, trans="T", check_finite=False).T)
+        return np.asarray(
+            solve_triangular(self.r, self.basis_at(x).T, trans="T", check_finite=False).T, dtype=np.float64
+        )
 
     def chebyshev(self, degree: int) -> Floats:
         """Coefficients of the fit on T_0..T_degree of t over `domain`: shape (degree+1,)."""

@@ -9,7 +9,7 @@ from service.core.curve import to_t, value_at
 from service.core.findings import Findings
 from service.core.observations import Floats
 from service.core.plan import BackCalculated, MaxPermissibleError
-from service.core.result import RequirementAnswer
+from service.core.result import RequirementAnswer, Unit
 
 NEWTON_ROUNDS = 50
 
@@ -30,34 +30,38 @@ def answer_requirements(found: Findings) -> list[RequirementAnswer]:
         message = f"The dataset has {levels} levels; at least {asked.min_levels} are asked for."
         answers.append(_plain("min_levels", asked.min_levels, float(levels), "levels", met, message))
     if asked.min_r2 is not None:
-        r2 = found.curve.r2
-        met = None if r2 is None else r2 >= asked.min_r2
-        message = (
-            "R-squared has no value, since y is constant."
-            if r2 is None
-            else (f"R-squared is {r2:.8g}; at least {asked.min_r2:g} is asked for. It says little about bend.")
-        )
-        answers.append(_plain("min_r2", asked.min_r2, r2, "none", met, message))
+        answers.append(_min_r2(found, asked.min_r2))
     if asked.max_unseen_bend is not None:
-        bend = found.unseen.bend.y
-        met = None if bend is None or bend > asked.max_unseen_bend else True
-        message = (
-            "The data can estimate no further term, so the unseen bend has no bound."
-            if bend is None
-            else (f"A bend of up to {bend:.4g} could hide in these data; at most {asked.max_unseen_bend:g} is allowed.")
-        )
-        answers.append(_plain("max_unseen_bend", asked.max_unseen_bend, bend, "y", met, message))
+        answers.append(_max_unseen_bend(found, asked.max_unseen_bend))
     return answers
 
 
+def _min_r2(found: Findings, asked: float) -> RequirementAnswer:
+    r2 = found.curve.r2
+    if r2 is None:
+        return _plain("min_r2", asked, None, "none", None, "R-squared has no value, since y is constant.")
+    message = f"R-squared is {r2:.8g}; at least {asked:g} is asked for. It says little about bend."
+    return _plain("min_r2", asked, r2, "none", r2 >= asked, message)
+
+
+def _max_unseen_bend(found: Findings, asked: float) -> RequirementAnswer:
+    """Met or not known, never failed: a bend that could hide is not a bend that is there."""
+    bend = found.unseen.bend.y
+    if bend is None:
+        message = "The data can estimate no further term, so the unseen bend has no bound."
+        return _plain("max_unseen_bend", asked, None, "y", None, message)
+    message = f"A bend of up to {bend:.4g} could hide in these data; at most {asked:g} is allowed."
+    return _plain("max_unseen_bend", asked, bend, "y", True if bend <= asked else None, message)
+
+
 def _plain(
-    name: str, asked: float, found: float | None, unit: str, met: bool | None, message: str
+    name: str, asked: float, found: float | None, unit: Unit, met: bool | None, message: str
 ) -> RequirementAnswer:
     return RequirementAnswer(
         requirement=name,
         asked={"value": asked},
         found=found,
-        unit=unit,  # type: ignore[arg-type]
+        unit=unit,
         worst_point=None,
         worst_x=None,
         met=met,
@@ -129,7 +133,7 @@ def allowed_error(asked: MaxPermissibleError, found: Findings, at_x: Floats) -> 
 def _permissible_error(found: Findings, asked: MaxPermissibleError) -> RequirementAnswer:
     o = found.observations
     name = "max_permissible_error"
-    unit = "percent" if asked.kind != "absolute" else asked.of
+    unit: Unit = "percent" if asked.kind != "absolute" else asked.of
     if asked.of == "x" and not found.monotonic:
         message = "The error in x has no value, because the curve is not monotonic and x cannot be found from y."
         return _answer(name, asdict(asked), None, unit, None, None, False, message)
@@ -189,7 +193,7 @@ def _answer(
     name: str,
     asked: dict[str, object],
     found: float | None,
-    unit: str,
+    unit: Unit,
     worst: int | None,
     worst_x: float | None,
     met: bool | None,
@@ -199,7 +203,7 @@ def _answer(
         requirement=name,
         asked=asked,
         found=found,
-        unit=unit,  # type: ignore[arg-type]
+        unit=unit,
         worst_point=worst,
         worst_x=worst_x,
         met=met,

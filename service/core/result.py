@@ -4,6 +4,7 @@ from dataclasses import dataclass
 from typing import Any, Literal
 
 Severity = Literal["note", "caution", "serious"]
+Unit = Literal["x", "y", "percent", "share", "levels", "none"]
 VerdictWord = Literal["adequate", "conditional", "inadequate", "undecided"]
 
 
@@ -272,7 +273,7 @@ class RequirementAnswer:
     requirement: str
     asked: dict[str, Any]
     found: float | None
-    unit: Literal["x", "y", "percent", "share", "levels", "none"]
+    unit: Unit
     worst_point: int | None
     worst_x: float | None
     met: bool | None

@@ -27,7 +27,9 @@ def rules_disagree(found: Findings) -> Warning | None:
     elif lower:
         message += "Cross-validation does no better with it than with a lower degree: a repeat run would settle it."
     else:
-        message += "Such rules take a degree too many in a fifth to a half of ordinary calibrations; no action is needed."
+        message += (
+            "Such rules take a degree too many in a fifth to a half of ordinary calibrations; no action is needed."
+        )
     return Warning(
         code="rules_disagree",
         severity=severity,

@@ -30,14 +30,18 @@ def suspect_point(found: Findings) -> Warning | None:
     serious = changed or (
         largest.p is not None and largest.p < OUTLIER_SERIOUS and bool(np.isnan(cook) or cook > COOK_NOTE)
     )
-    message = f"Point {named} does not belong with the others" if len(points) == 1 else (
-        f"Points {named} do not belong with the others"
+    message = (
+        f"Point {named} does not belong with the others"
+        if len(points) == 1
+        else (f"Points {named} do not belong with the others")
     )
     message += (
         f"; without it the degree is {found.choice.walked.degree}, with it {found.choice.walked.degree_with_all}. The "
         "degree was chosen without it, but the fitted curve still holds it. "
         if changed
-        else " and pulls the curve. " if serious else ". "
+        else " and pulls the curve. "
+        if serious
+        else ". "
     )
     message += (
         "Check the reading and the standard used; repeat that level. Remove it only for a cause you can write down, and "
@@ -141,6 +145,8 @@ def wide_gap(found: Findings) -> Warning | None:
         code="wide_gap",
         severity="caution" if here > GAP_CAUTION else "note",
         message=message,
-        evidence=Evidence(statistic=max(here, above), value=float(level_x[gap + 1] - level_x[gap]), threshold=GAP_CAUTION),
+        evidence=Evidence(
+            statistic=max(here, above), value=float(level_x[gap + 1] - level_x[gap]), threshold=GAP_CAUTION
+        ),
         method=method,
     )

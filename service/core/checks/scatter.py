@@ -88,9 +88,7 @@ def uncertainty_inconsistent(found: Findings) -> Warning | None:
         else "The readings scatter less than their stated uncertainties suggest: u_y may be too large, or may hold a "
         "part common to all readings, which a fit cannot show."
     )
-    return from_test(
-        "uncertainty_inconsistent", test, severity if larger else "note", message, threshold=CAUTION
-    )
+    return from_test("uncertainty_inconsistent", test, severity if larger else "note", message, threshold=CAUTION)
 
 
 def weights_guessed(found: Findings) -> Warning | None:
@@ -102,14 +100,20 @@ def weights_guessed(found: Findings) -> Warning | None:
     gain = max(m.gain_over_equal for m in choice.compared)
     method = "restricted log-likelihood of 1, 1/|x| and 1/x^2 (Harville 1977)"
     if choice.used != "equal" and (gain < CLEAR_GAIN or n <= SMALL_N):
-        severity, message = "caution", (
-            f"Weights {choice.used} were chosen from the data on slight evidence (gain {gain:.1f} in log-likelihood, "
-            f"{n} points). Give u_y, or fix the weights in the plan from the method's validation."
+        severity, message = (
+            "caution",
+            (
+                f"Weights {choice.used} were chosen from the data on slight evidence (gain {gain:.1f} in log-likelihood, "
+                f"{n} points). Give u_y, or fix the weights in the plan from the method's validation."
+            ),
         )
     elif choice.used == "equal" and n <= SMALL_N:
-        severity, message = "note", (
-            f"With {n} points the data cannot show whether scatter grows with x; equal weights are assumed. Fix the "
-            "weights in the plan from the method's validation, or give u_y."
+        severity, message = (
+            "note",
+            (
+                f"With {n} points the data cannot show whether scatter grows with x; equal weights are assumed. Fix the "
+                "weights in the plan from the method's validation, or give u_y."
+            ),
         )
     else:
         return None

@@ -1,0 +1,151 @@
+"""How often each rule finds the true degree, and what a wrong choice costs, on simulated calibrations.
+
+python -m tests.benchmarks.policy --sets 16000 --seed 1
+
+right: the exact degree, in % of the polynomial truths whose leading term has power 0.99 or more; strong: where its
+effect is twice that; 0.8: where its power is 0.8; over, under: chosen too high (all polynomial truths) and too low (at
+power 0.99 or more); R95, R99: quantiles of the error of the chosen curve against the true one, over that of the best
+degree; NP R95: the same where the truth is no polynomial.
+"""
+
+import argparse
+import time
+from collections import defaultdict
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from service.core.analysis import analyse
+from service.core.choice import choose_degree
+from service.core.observations import observe
+from service.core.plan import Plan, Resampling
+from tests.benchmarks.alternatives import ALTERNATIVES, Fits
+from tests.benchmarks.calibrations import Calibration, draw_many
+
+Rule = Callable[[Fits], int]
+NAMES = ("right", "strong", "0.8", "over", "under", "R95", "R99", "NP R95")
+
+
+@dataclass
+class Record:
+    """What one rule chose on every set: difference from the true degree (None: no polynomial), and cost."""
+
+    off: list[int | None] = field(default_factory=list)
+    ratio: list[float] = field(default_factory=list)
+
+
+@dataclass(frozen=True)
+class Figures:
+    """Rows of the table, by rule; `sets` describes the set that each entry belongs to."""
+
+    sets: list[Calibration]
+    records: dict[str, Record]
+
+    def row(self, rule: str, keep: Callable[[Calibration], bool] = lambda _: True) -> dict[str, float]:
+        """The figures of one rule over the sets that `keep` admits."""
+        rows = [
+            (c, off, ratio)
+            for c, off, ratio in zip(self.sets, self.records[rule].off, self.records[rule].ratio, strict=True)
+            if keep(c)
+        ]
+        clear = [off for c, off, _ in rows if off is not None and c.power != "0.8"]
+        return {
+            "right": _percent([off == 0 for off in clear]),
+            "strong": _percent([off == 0 for c, off, _ in rows if c.power == "strong"]),
+            "0.8": _percent([off == 0 for c, off, _ in rows if c.power == "0.8"]),
+            "over": _percent([off > 0 for _, off, _ in rows if off is not None]),
+            "under": _percent([off < 0 for off in clear]),
+            "R95": _quantile([r for _, off, r in rows if off is not None], 0.95),
+            "R99": _quantile([r for _, off, r in rows if off is not None], 0.99),
+            "NP R95": _quantile([r for _, off, r in rows if off is None], 0.95),
+        }
+
+
+def bend(fits: Fits, *, screen: bool = True) -> int:
+    """`least_bend` of the service, weights as known."""
+    data = fits.data
+    return choose_degree(data.x, data.y, weights=data.weights, max_degree=data.highest, screen=screen)
+
+
+def bend_with_weights(fits: Fits) -> int:
+    """The whole default analysis: automatic weights, u_y where it is known."""
+    data = fits.data
+    u_y = None if data.weights is None else 1 / np.sqrt(data.weights)
+    plan = Plan(min_degree=0, max_degree=data.highest, resampling=Resampling(scheme="leave_one_out"))
+    return analyse(observe(data.x, data.y, u_y=u_y), plan).chosen_degree
+
+
+RULES: dict[str, Rule] = ALTERNATIVES | {
+    "least_bend without the point screen": lambda f: bend(f, screen=False),
+    "least_bend": bend,
+}
+
+
+def run(sets: int, seed: int, rules: dict[str, Rule]) -> Figures:
+    """Draw, fit and choose; every rule sees the same sets."""
+    drawn: list[Calibration] = []
+    records: dict[str, Record] = defaultdict(Record)
+    for i, data in enumerate(draw_many(sets, seed)):
+        fits = Fits(data, np.random.default_rng([seed, i]))
+        best = float(fits.errors.min())
+        drawn.append(data)
+        for name, rule in rules.items():
+            chosen = rule(fits)
+            records[name].off.append(None if data.degree is None else chosen - data.degree)
+            records[name].ratio.append(float(fits.errors[chosen]) / best)
+    return Figures(drawn, dict(records))
+
+
+def table(figures: Figures, rules: dict[str, Rule]) -> str:
+    """The figures as a Markdown table."""
+    lines = ["| rule | " + " | ".join(NAMES) + " |", "|---" * (len(NAMES) + 1) + "|"]
+    for rule in rules:
+        row = figures.row(rule)
+        lines.append(f"| {rule} | " + " | ".join(_shown(row[name]) for name in NAMES) + " |")
+    return "\n".join(lines)
+
+
+def breakdown(figures: Figures, rule: str) -> str:
+    """right and over of one rule by kind of error, and by number of points where errors are normal."""
+    lines = []
+    for kind in sorted({c.errors for c in figures.sets}):
+        row = figures.row(rule, lambda c, kind=kind: c.errors == kind)  # type: ignore[misc]
+        lines.append(f"{kind:24} right {row['right']:5.1f}  over {row['over']:4.1f}")
+    for lo, hi in ((5, 8), (9, 15), (16, 40), (41, 200)):
+        row = figures.row(rule, lambda c, lo=lo, hi=hi: c.errors == "normal" and lo <= c.x.size <= hi)  # type: ignore[misc]
+        lines.append(f"{f'normal, n {lo} to {hi}':24} right {row['right']:5.1f}  over {row['over']:4.1f}")
+    return "\n".join(lines)
+
+
+def _percent(hits: list[bool]) -> float:
+    return 100 * float(np.mean(hits)) if hits else float("nan")
+
+
+def _quantile(values: list[float], q: float) -> float:
+    return float(np.quantile(values, q)) if values else float("nan")
+
+
+def _shown(value: float) -> str:
+    return f"{value:.0f}" if value >= 100 else f"{value:.1f}"
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("--sets", type=int, default=16000)
+    parser.add_argument("--seed", type=int, default=1)
+    parser.add_argument("--whole", type=int, default=0, help="further sets for the whole default analysis")
+    asked = parser.parse_args()
+    start = time.perf_counter()
+    figures = run(asked.sets, asked.seed, RULES)
+    print(table(figures, RULES))
+    print("\nleast_bend\n" + breakdown(figures, "least_bend"))
+    if asked.whole:
+        rules: dict[str, Rule] = {"least_bend with automatic weights": bend_with_weights}
+        fresh = run(asked.whole, asked.seed + 1, rules)
+        print("\n" + table(fresh, rules) + "\n" + breakdown(fresh, next(iter(rules))))
+    print(f"\n{asked.sets} sets, seed {asked.seed}, {time.perf_counter() - start:.0f} s")
+
+
+if __name__ == "__main__":
+    main()
