@@ -62,8 +62,8 @@ def settle_spare_points(found: Findings) -> Advice:
         at_x=tuple(new.tolist()),
         unseen_bend_expected=None,
         message=(
-            f"Add one reading at each of {missing} new levels, x = {places}: then two levels and three points are spare "
-            f"at degree {found.degree}, enough to judge the fit by."
+            f"Add one reading at each of {missing} new levels, x = {places}: then two levels and three points are "
+            f"spare at degree {found.degree}, enough to judge the fit by."
         ),
     )
 

@@ -64,7 +64,7 @@ def choose(fits: NestedFits, held: HeldOut, plan: Plan, walked: Walked | None) -
                 p=None,
                 threshold=None,
                 points=(),
-                words=f"{plan.rule} cannot choose here ({chosen.reason}); the degree that least_bend picks stands: {bend}.",
+                words=f"{plan.rule} cannot choose here ({chosen.reason}); what least_bend picks stands: degree {bend}.",
             )
         )
     size = size_under_null(walked.factors.tolist(), fits.n, degree) if plan.rule == "least_bend" else None
@@ -148,7 +148,8 @@ def _rule_steps(chosen: RuleChoice) -> list[Step]:
         return []
     how = {
         "lowest_cv": "the lowest cross-validated mean square error",
-        "one_standard_error": "the least degree within one standard error of the lowest cross-validated mean square error",
+        "one_standard_error": "a cross-validated mean square error within one standard error of the lowest, as no "
+        "lower degree has",
         "aicc": "the lowest AICc",
         "bic": "the lowest BIC",
     }[chosen.rule]
@@ -212,4 +213,4 @@ def _picks_without_folds(fits: NestedFits, rss: Floats, size: Floats, plan: Plan
     if not fits.intercept:
         score[:, 0] = np.inf
     score[:, : min(plan.min_degree, fits.top)] = np.inf
-    return np.argmin(score, axis=1).astype(np.intp)
+    return np.asarray(np.argmin(score, axis=1), dtype=np.intp)

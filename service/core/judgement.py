@@ -48,8 +48,8 @@ def _undecided(found: Findings, answers: Sequence[RequirementAnswer], advice: li
     spare_levels = found.observations.levels - found.full.columns(found.degree)
     if df < LEAST_DF or spare_levels < 1:
         message = (
-            f"Degree {found.degree} takes {found.full.columns(found.degree)} coefficients from {found.observations.n} points "
-            f"at {found.observations.levels} levels: too little is left over to judge the fit."
+            f"Degree {found.degree} takes {found.full.columns(found.degree)} coefficients from {found.observations.n} "
+            f"points at {found.observations.levels} levels: too little is left over to judge the fit."
         )
         reasons.append(Reason(code="too_few_spare_points", severity="caution", message=message))
         advice.append(settle_spare_points(found))

@@ -66,7 +66,7 @@ def gap_ratios(fits: NestedFits) -> Floats:
 
 def gap_factors(ratios: Floats) -> Floats:
     """min(1, 4/g^2): a term that swings freely in a gap must show more before it is believed."""
-    return np.minimum(1.0, 4.0 / np.maximum(ratios, 1e-300) ** 2)
+    return 4.0 / np.maximum(ratios * ratios, 4.0)
 
 
 def walk(p: Sequence[float], factors: Sequence[float], n: int) -> list[Look]:

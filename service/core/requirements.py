@@ -76,8 +76,8 @@ def _monotonic(found: Findings) -> RequirementAnswer:
         f"The curve {word} throughout the working range."
         if found.monotonic
         else (
-            f"The curve turns or is flat within the working range (slope {least:.4g} to {greatest:.4g}), so one reading "
-            "can mean more than one value."
+            f"The curve turns or is flat within the working range (slope {least:.4g} to {greatest:.4g}), so one "
+            "reading can mean more than one value."
         )
     )
     return RequirementAnswer(

@@ -57,13 +57,13 @@ def studentised(fits: NestedFits, degree: int, *, known_uncertainty: bool = Fals
     with np.errstate(divide="ignore", invalid="ignore"):
         spare = np.where(h < 1 - 1e-10, 1 - h, np.nan)
         if known_uncertainty:
-            return e / np.sqrt(spare)
+            return np.asarray(e / np.sqrt(spare))
         if df < 1 or fits.rss[degree] <= fits.rounding_rss:
             return np.full(e.shape, np.nan)
         left = fits.rss[degree] - e * e / spare
         # a point that alone spoils an otherwise exact fit: keep its residual large but finite
         left = np.maximum(left, fits.rounding_rss + 1e-14 * fits.rss[degree])
-        return e / np.sqrt(spare * left / df)
+        return np.asarray(e / np.sqrt(spare * left / df))
 
 
 def outlier_p(value: float, fits: NestedFits, degree: int, *, known_uncertainty: bool = False) -> float:

@@ -33,7 +33,7 @@ class Unseen:
             return np.full(x.shape, np.nan)
         last = self.first_column + self.bounds.size
         shapes = self.fits.orthonormal_at(x)[:, self.first_column : last]
-        return np.sqrt(np.sum((shapes * self.bounds) ** 2, axis=1))
+        return np.asarray(np.sqrt(np.sum((shapes * self.bounds) ** 2, axis=1)))
 
 
 def unseen_bend(

@@ -97,7 +97,8 @@ def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
         for name, w, value, gain in zip(names, walks, likelihood, gains, strict=True)
     )
     if best == 0:
-        why = f"equal weights: no other gains {GAIN_NEEDED:g} or more in restricted log-likelihood (best gain {max(gains[1:]):.2f})"
+        most = max(gains[1:])
+        why = f"equal weights: no other gains {GAIN_NEEDED:g} or more in restricted log-likelihood (most: {most:.2f})"
     else:
         why = f"{names[best]}: gains {gains[best]:.2f} in restricted log-likelihood over equal weights"
     choice = WeightChoice(asked="auto", used=names[best], common_degree=common, compared=compared, why=why)

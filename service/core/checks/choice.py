@@ -21,8 +21,8 @@ def rules_disagree(found: Findings) -> Warning | None:
     message = f"Degree {found.degree} is chosen, while other rules would take: {listed}. "
     if higher:
         message += (
-            "Even the most sparing cross-validation rule wants a higher degree: look at the residuals by x before relying "
-            "on the choice, and add levels where they bend."
+            "Even the most sparing cross-validation rule wants a higher degree: look at the residuals by x before "
+            "relying on the choice, and add levels where they bend."
         )
     elif lower:
         message += "Cross-validation does no better with it than with a lower degree: a repeat run would settle it."
@@ -50,8 +50,8 @@ def unstable_choice(found: Findings) -> Warning | None:
         code="unstable_choice",
         severity="caution" if share < UNSTABLE_CAUTION else "note",
         message=(
-            f"When part of the data is left out the choice changes: {shares}. The data are just enough, or not quite, to "
-            "tell these degrees apart. Repeat the run or add levels."
+            f"When part of the data is left out the choice changes: {shares}. The data are just enough, or not quite, "
+            "to tell these degrees apart. Repeat the run or add levels."
         ),
         evidence=Evidence(statistic=share, value=float(stability.resamples), threshold=UNSTABLE_CAUTION),
         method=stability.method,

@@ -59,8 +59,8 @@ def degree_at_limit(found: Findings) -> Warning | None:
         code="degree_at_limit",
         severity="caution",
         message=(
-            f"Degree {found.degree} is the highest that {limit} allows, so it is not known whether the bend ends there. "
-            f"{action}; where no low degree suffices, the quantity may not follow a polynomial at all."
+            f"Degree {found.degree} is the highest that {limit} allows, so it is not known whether the bend ends "
+            f"there. {action}; where no low degree suffices, the quantity may not follow a polynomial at all."
         ),
         evidence=Evidence(value=float(found.degree), threshold=float(found.tried.top)),
         method="comparison with the highest degree tried",
@@ -76,8 +76,8 @@ def bend_may_hide(found: Findings) -> Warning | None:
         code="bend_may_hide",
         severity="note",
         message=(
-            f"A bend of up to {bend.y:.3g} (in y), {bend.in_single_readings:.1f} times the scatter of one reading, could "
-            "be there without showing in these data. More levels or repeats shrink it."
+            f"A bend of up to {bend.y:.3g} (in y), {bend.in_single_readings:.1f} times the scatter of one reading, "
+            "could be there without showing in these data. More levels or repeats shrink it."
         ),
         evidence=Evidence(statistic=bend.in_single_readings, value=bend.y, threshold=4.0),
         method=bend.method,

@@ -44,8 +44,8 @@ def suspect_point(found: Findings) -> Warning | None:
         else ". "
     )
     message += (
-        "Check the reading and the standard used; repeat that level. Remove it only for a cause you can write down, and "
-        "post the dataset again."
+        "Check the reading and the standard used; repeat that level. Remove it only for a cause you can write down, "
+        "and post the dataset again."
     )
     return Warning(
         code="suspect_point",
@@ -120,8 +120,9 @@ def wide_gap(found: Findings) -> Warning | None:
                 code="wide_gap",
                 severity="caution",
                 message=(
-                    f"The working range asked for, {asked[0]:g} to {asked[1]:g}, goes beyond the points, {lo:g} to {hi:g}. "
-                    "Everything here holds between the points only; nothing is known beyond them. Add levels at the ends."
+                    f"The working range asked for, {asked[0]:g} to {asked[1]:g}, goes beyond the points, {lo:g} to "
+                    f"{hi:g}. Everything here holds between the points only; nothing is known beyond them. Add levels "
+                    "at the ends."
                 ),
                 evidence=Evidence(value=outside, threshold=OUTSIDE_SHARE * (asked[1] - asked[0])),
                 method="range of the points against the working range",

@@ -103,16 +103,16 @@ def weights_guessed(found: Findings) -> Warning | None:
         severity, message = (
             "caution",
             (
-                f"Weights {choice.used} were chosen from the data on slight evidence (gain {gain:.1f} in log-likelihood, "
-                f"{n} points). Give u_y, or fix the weights in the plan from the method's validation."
+                f"Weights {choice.used} were chosen from the data on slight evidence (gain {gain:.1f} in "
+                f"log-likelihood, {n} points). Give u_y, or fix the weights in the plan from the method's validation."
             ),
         )
     elif choice.used == "equal" and n <= SMALL_N:
         severity, message = (
             "note",
             (
-                f"With {n} points the data cannot show whether scatter grows with x; equal weights are assumed. Fix the "
-                "weights in the plan from the method's validation, or give u_y."
+                f"With {n} points the data cannot show whether scatter grows with x; equal weights are assumed. Fix "
+                "the weights in the plan from the method's validation, or give u_y."
             ),
         )
     else:
