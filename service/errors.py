@@ -23,6 +23,10 @@ class FieldError:
     pointer: str
     message: str
 
+    def __str__(self) -> str:
+        """Both in one line."""
+        return f"{self.pointer} {self.message}" if self.pointer else self.message
+
 
 class LeastbendError(Exception):
     """Base of everything the service raises on purpose."""
@@ -42,7 +46,7 @@ class InvalidInput(LeastbendError):
     code = "invalid_input"
 
     def __init__(self, errors: Sequence[FieldError], *, message: str | None = None, code: str | None = None) -> None:
-        first = f"{errors[0].pointer}: {errors[0].message}" if errors else "invalid input"
+        first = str(errors[0]) if errors else "invalid input"
         super().__init__(message or first, code=code)
         self.errors = tuple(errors)
 

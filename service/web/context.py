@@ -1,0 +1,31 @@
+"""What every request works with, made once by `create_app` and never global."""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Annotated, cast
+
+from fastapi import Depends, Request
+
+from service.settings import Settings
+from service.store.database import Database
+from service.store.transport import Transport
+from service.web.waiting import Waiting
+
+
+@dataclass(frozen=True, kw_only=True)
+class Context:
+    """One installation as the routes see it."""
+
+    settings: Settings
+    database: Database
+    transport: Transport
+    waiting: Waiting
+    now: Callable[[], datetime]
+
+
+def _context(request: Request) -> Context:
+    return cast(Context, request.app.state.context)
+
+
+Ctx = Annotated[Context, Depends(_context)]

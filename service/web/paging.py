@@ -1,0 +1,27 @@
+"""Cursors: opaque to callers, and bound to the id of the last item, so that inserts neither skip nor repeat one."""
+
+import base64
+import binascii
+import re
+
+from service.errors import InvalidInput
+
+IDENTIFIER = re.compile(r"[0-9a-z-]{1,64}")
+
+
+def cursor_of(last: str | None) -> str | None:
+    """The cursor for what follows `last`."""
+    return None if last is None else base64.urlsafe_b64encode(last.encode()).decode().rstrip("=")
+
+
+def position(cursor: str | None) -> str | None:
+    """Inverse of `cursor_of`. Raises InvalidInput."""
+    if cursor is None:
+        return None
+    try:
+        last = base64.b64decode(cursor + "=" * (-len(cursor) % 4), altchars=b"-_", validate=True).decode("ascii")
+    except (binascii.Error, ValueError):
+        last = ""
+    if not IDENTIFIER.fullmatch(last):
+        raise InvalidInput.at("/query/cursor", "is not a next_cursor of this list")
+    return last

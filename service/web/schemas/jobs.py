@@ -1,0 +1,135 @@
+"""A job as asked for, in the history, and with its result."""
+
+import json
+from datetime import datetime
+from typing import Annotated, Any, Literal, Self
+
+from pydantic import Field, model_validator
+
+from service.core.plan import Plan
+from service.store.clock import rfc3339
+from service.store.records import JobDetail, JobRecord
+from service.web.schemas.common import Answer, Body, FieldProblem, Label
+from service.web.schemas.datasets import DatasetBody
+from service.web.schemas.plans import PlanBody
+from service.web.schemas.results import JobResult
+
+StateWord = Literal["queued", "running", "succeeded", "failed", "cancelled"]
+VerdictWord = Literal["adequate", "conditional", "inadequate", "undecided"]
+Priority = Annotated[int, Field(ge=-100, le=100)]
+
+
+class JobBody(Body):
+    """One fit-and-select of a dataset under a plan. Give the dataset itself or the id of a stored one."""
+
+    dataset_id: Label | None = Field(None, description="A dataset that was posted before.")
+    dataset: DatasetBody | None = Field(None, description="The dataset itself; it is stored as by POST /v1/datasets.")
+    plan: PlanBody | None = Field(None, description="Absent: every default.")
+    subject: Label | None = Field(None, description="Absent: the dataset's.")
+    priority: Priority = Field(0, description="Higher runs first.")
+
+    @model_validator(mode="after")
+    def _one_dataset(self) -> Self:
+        if (self.dataset_id is None) == (self.dataset is None):
+            raise ValueError("give exactly one of dataset_id and dataset")
+        return self
+
+
+class Progress(Answer):
+    """How far a running job is."""
+
+    stage: str
+    done: int
+    of: int
+
+
+class JobError(Answer):
+    """Why a job failed."""
+
+    code: str
+    message: str
+    errors: list[FieldProblem] | None = None
+
+
+class JobSummary(Answer):
+    """One line of the history."""
+
+    id: str
+    state: StateWord
+    subject: str
+    dataset_id: str
+    plan_digest: str
+    submitted_by: str
+    priority: int
+    queued_at: datetime
+    started_at: datetime | None = Field(description="Start of the last attempt.")
+    finished_at: datetime | None
+    attempts: int
+    worker: str | None
+    progress: Progress | None
+    verdict: VerdictWord | None
+    chosen_degree: int | None
+    error: JobError | None
+
+
+class JobView(JobSummary):
+    """One job, with its plan and, once it succeeded, its result."""
+
+    plan: Plan = Field(description="The whole plan, defaults included.")
+    result: JobResult | None
+
+
+class Reason(Answer):
+    """One reason for a verdict."""
+
+    code: str
+    severity: Literal["note", "caution", "serious"]
+    message: str
+
+
+class Verdict(Answer):
+    """The short statement for QA. Its ETag is the SHA-256 of its canonical JSON."""
+
+    job_id: str
+    subject: str
+    verdict: VerdictWord
+    chosen_degree: int
+    reasons: list[Reason]
+    dataset_digest: str
+    plan_digest: str
+    result_digest: str
+    previous: str | None = Field(description="Digest of the verdict issued before this one, whatever its subject.")
+    issued_at: datetime
+    service_version: str
+
+
+def job_summary(job: JobRecord) -> dict[str, Any]:
+    """The JSON of JobSummary."""
+    progress = None if job.stage is None else {"stage": job.stage, "done": job.stage_done, "of": job.stage_of}
+    return {
+        "id": job.id,
+        "state": job.state.value,
+        "subject": job.subject,
+        "dataset_id": job.dataset_id,
+        "plan_digest": job.plan_digest,
+        "submitted_by": job.submitted_by,
+        "priority": job.priority,
+        "queued_at": rfc3339(job.queued_at),
+        "started_at": None if job.started_at is None else rfc3339(job.started_at),
+        "finished_at": None if job.finished_at is None else rfc3339(job.finished_at),
+        "attempts": job.attempts,
+        "worker": job.worker,
+        "progress": progress,
+        "verdict": job.verdict,
+        "chosen_degree": job.chosen_degree,
+        "error": None if job.error is None else json.loads(job.error),
+    }
+
+
+def job_document(detail: JobDetail) -> bytes:
+    """The JSON of JobView. Stored documents are spliced in as they are: nothing is rounded or reordered on the way."""
+    result = "null"
+    if detail.result is not None and detail.provenance is not None:
+        result = f'{detail.result[:-1]},"provenance":{detail.provenance}}}'
+    head = json.dumps(job_summary(detail.job), allow_nan=False, ensure_ascii=False)
+    return f'{head[:-1]},"plan":{detail.plan},"result":{result}}}'.encode()
