@@ -10,7 +10,7 @@ from service.store.tables import job_events
 
 
 def add(connection: Connection, job_id: str, kind: str, now: datetime, **detail: Any) -> None:
-    """One event: `queued`, `started`, `requeued`, `succeeded` or `failed`, with what is known of it."""
+    """One event: `queued`, `started`, `requeued`, `succeeded`, `failed` or `cancelled`, with what is known of it."""
     connection.execute(insert(job_events), {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
 
 

@@ -7,14 +7,15 @@ from typing import Any
 from sqlalchemy import Connection, RowMapping, Select, func, insert, literal, select
 
 from service.store.records import JobDetail, JobFilter, JobRecord, Page
-from service.store.tables import FINAL, State, jobs, plans, results
+from service.store.tables import FINAL, WAITING, State, jobs, plans, results
+from service.store.turns import next_turn
 
 RECORD = tuple(jobs.c[one.name] for one in fields(JobRecord))
 
 
 def waiting(connection: Connection, *, at_most: int) -> int:
     """Number of jobs that wait, counted no further than `at_most`."""
-    some = select(literal(1)).where(jobs.c.state == State.QUEUED).limit(at_most).subquery()
+    some = select(literal(1)).where(WAITING).limit(at_most).subquery()
     return connection.execute(select(func.count()).select_from(some)).scalar_one()
 
 
@@ -30,22 +31,20 @@ def add(
     now: datetime,
 ) -> None:
     """A new job, waiting; the caller hands its id to the queue after the commit."""
-    connection.execute(
-        insert(jobs),
-        {
-            "id": job_id,
-            "state": State.QUEUED,
-            "dataset_id": dataset_id,
-            "plan_digest": plan_digest,
-            "subject": subject,
-            "submitted_by": submitted_by,
-            "priority": priority,
-            "queued_at": now,
-            "run_after": now,
-            "dispatched_at": now,
-            "attempts": 0,
-        },
-    )
+    row = {
+        "id": job_id,
+        "state": State.QUEUED,
+        "dataset_id": dataset_id,
+        "plan_digest": plan_digest,
+        "subject": subject,
+        "submitted_by": submitted_by,
+        "priority": priority,
+        "turn": next_turn(submitted_by, priority),
+        "queued_at": now,
+        "run_after": now,
+        "attempts": 0,
+    }
+    connection.execute(insert(jobs).values(row))
 
 
 def find(connection: Connection, job_id: str) -> JobRecord | None:

@@ -4,53 +4,68 @@ A claim makes a fresh token; every later step of the same attempt demands it, so
 and is not (paused, cut off) can change nothing any more: its UPDATE finds no row, and Stale tells it so.
 """
 
-from collections.abc import Sequence
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, and_, func, or_, select, update
+from sqlalchemy import Connection, func, literal, select, update
 
 from service.store.clock import new_id
 from service.store.records import Claim, Held
-from service.store.tables import State, jobs
+from service.store.tables import WAITING, State, jobs
+from service.store.turns import order
 
 RELEASED = {"token": None, "lease_until": None, "stage": None, "stage_done": None, "stage_of": None}
+CLAIMED = (
+    jobs.c.id,
+    jobs.c.token,
+    jobs.c.worker,
+    jobs.c.dataset_id,
+    jobs.c.plan_digest,
+    jobs.c.subject,
+    jobs.c.submitted_by,
+    jobs.c.priority,
+    jobs.c.attempts,
+    jobs.c.queued_at,
+    jobs.c.started_at,
+)
 
 
 class Stale(Exception):
     """The job is no longer held under this token."""
 
 
-def claim(connection: Connection, job_id: str, *, worker: str, now: datetime, lease_until: datetime) -> Claim | None:
-    """Take a waiting job whose time has come; None if there is nothing to take."""
-    token = new_id()
+def claim_next(
+    connection: Connection, *, worker: str, now: datetime, lease_until: datetime, stalest: bool = False
+) -> Claim | None:
+    """Take the waiting job whose turn it is; None if none waits or their time has not come.
+
+    `stalest` lets turns go before priorities. On PostgreSQL two claims at once skip each other's row.
+    """
+    first = (
+        select(jobs.c.id)
+        .where(WAITING, jobs.c.run_after <= now)
+        .order_by(*order(stalest=stalest))
+        .limit(1)
+        .with_for_update(skip_locked=True)
+    )
     taken = (
         update(jobs)
-        .where(jobs.c.id == job_id, jobs.c.state == State.QUEUED, jobs.c.run_after <= now)
+        .where(jobs.c.id == first.scalar_subquery(), WAITING)
         .values(
             state=State.RUNNING,
-            token=token,
+            token=new_id(),
             worker=worker,
             lease_until=lease_until,
             started_at=now,
             attempts=jobs.c.attempts + 1,
         )
-        .returning(
-            jobs.c.dataset_id,
-            jobs.c.plan_digest,
-            jobs.c.subject,
-            jobs.c.submitted_by,
-            jobs.c.priority,
-            jobs.c.attempts,
-            jobs.c.queued_at,
-        )
+        .returning(*CLAIMED)
     )
     row = connection.execute(taken).mappings().first()
     if row is None:
         return None
     values = dict(row)
-    attempt = values.pop("attempts")
-    return Claim(job_id=job_id, token=token, attempt=attempt, started_at=now, **values)
+    return Claim(job_id=values.pop("id"), attempt=values.pop("attempts"), **values)
 
 
 def renew(
@@ -63,9 +78,31 @@ def renew(
     _held(connection, job_id, token, values)
 
 
-def give_back(connection: Connection, job_id: str, token: str, *, run_after: datetime) -> None:
-    """Let the job wait again. Raises Stale."""
-    _held(connection, job_id, token, {"state": State.QUEUED, "run_after": run_after, **RELEASED})
+def give_back(connection: Connection, job_id: str, token: str, *, run_after: datetime, counted: bool = True) -> None:
+    """Let the job wait again, in its old turn. Not `counted`: the attempt was no fault of the job. Raises Stale."""
+    values: dict[str, Any] = {"state": State.QUEUED, "run_after": run_after, **RELEASED}
+    if not counted:
+        values["attempts"] = jobs.c.attempts - 1
+    _held(connection, job_id, token, values)
+
+
+def is_held(connection: Connection, job_id: str, token: str) -> bool:
+    """Whether this token still holds the job."""
+    held = (jobs.c.id == job_id, jobs.c.token == token, jobs.c.state == State.RUNNING)
+    return connection.execute(select(literal(1)).where(*held)).first() is not None
+
+
+def cancel(connection: Connection, job_id: str, *, now: datetime) -> State | None:
+    """End a job that has not ended, whoever holds it: their token is void from now on.
+
+    Answers the state that it was in when it was cancelled; None if there was nothing to cancel.
+    """
+    values = {"state": State.CANCELLED, "finished_at": now, **RELEASED}
+    for state in (State.QUEUED, State.RUNNING, State.QUEUED):  # it may move on between two looks, and back once
+        ended = update(jobs).where(jobs.c.id == job_id, jobs.c.state == state).values(**values)
+        if connection.execute(ended).rowcount == 1:
+            return state
+    return None
 
 
 def succeed(connection: Connection, job_id: str, token: str, *, now: datetime, verdict: str, degree: int) -> None:
@@ -95,30 +132,7 @@ def running(connection: Connection) -> list[Held]:
 
 def due(connection: Connection, now: datetime) -> int:
     """How many jobs wait and may run now."""
-    query = select(func.count()).where(jobs.c.state == State.QUEUED, jobs.c.run_after <= now)
-    return connection.execute(query).scalar_one()
-
-
-def undelivered(
-    connection: Connection, *, now: datetime, sent_before: datetime | None, limit: int
-) -> list[tuple[str, int]]:
-    """Waiting jobs to hand to the queue: their time has come since they were last sent, or, with `sent_before`,
-    they were sent before that moment and still wait. Id and priority, most urgent first."""
-    lost = jobs.c.dispatched_at < jobs.c.run_after
-    if sent_before is not None:
-        lost = or_(lost, jobs.c.dispatched_at < sent_before)
-    query = (
-        select(jobs.c.id, jobs.c.priority)
-        .where(and_(jobs.c.state == State.QUEUED, jobs.c.run_after <= now, lost))
-        .order_by(jobs.c.priority.desc(), jobs.c.id)
-        .limit(limit)
-    )
-    return [(row.id, row.priority) for row in connection.execute(query)]
-
-
-def mark_sent(connection: Connection, ids: Sequence[str], now: datetime) -> None:
-    """Remember that these ids went to the queue."""
-    connection.execute(update(jobs).where(jobs.c.id.in_(ids)).values(dispatched_at=now))
+    return connection.execute(select(func.count()).where(WAITING, jobs.c.run_after <= now)).scalar_one()
 
 
 def _held(connection: Connection, job_id: str, token: str, values: dict[str, Any]) -> None:

@@ -85,6 +85,7 @@ class Claim:
 
     job_id: str
     token: str
+    worker: str
     dataset_id: str
     plan_digest: str
     subject: str

@@ -12,6 +12,7 @@ from sqlalchemy import (
     BigInteger,
     CheckConstraint,
     Column,
+    ColumnElement,
     Dialect,
     ForeignKey,
     Index,
@@ -23,6 +24,7 @@ from sqlalchemy import (
     Text,
     TypeDecorator,
     UniqueConstraint,
+    literal_column,
 )
 
 from service.store.clock import from_microseconds, to_microseconds
@@ -111,9 +113,9 @@ jobs = Table(
     Column("subject", Text, nullable=False),
     Column("submitted_by", Text, nullable=False),
     Column("priority", Integer, nullable=False),
+    Column("turn", BigInteger, nullable=False, server_default="0"),  # place among the submitters of one priority
     Column("queued_at", Instant, nullable=False),
     Column("run_after", Instant, nullable=False),  # not before this moment
-    Column("dispatched_at", Instant, nullable=False),  # when its id last went to the queue
     Column("attempts", Integer, nullable=False),
     Column("token", Id),  # fencing: only who knows it may renew or finish
     Column("lease_until", Instant),
@@ -128,12 +130,24 @@ jobs = Table(
     Column("chosen_degree", Integer),
     CheckConstraint("state IN ('queued', 'running', 'succeeded', 'failed', 'cancelled')", name="state_known"),
     CheckConstraint("state <> 'running' OR (token IS NOT NULL AND lease_until IS NOT NULL)", name="running_is_held"),
-    Index(None, "state", "run_after"),
+    Index(None, "state", "id"),
     Index(None, "subject", "id"),
     Index(None, "submitted_by", "id"),
     Index(None, "verdict", "id"),
     Index(None, "dataset_id"),
 )
+
+# Of a literal, not a parameter: only then does either engine see that the indexes of what waits apply.
+WAITING = jobs.c.state == literal_column(f"'{State.QUEUED}'")
+
+
+def _index_of_waiting(name: str, *columns: ColumnElement[Any]) -> None:
+    Index(name, *columns, sqlite_where=WAITING, postgresql_where=WAITING)
+
+
+_index_of_waiting("ix_jobs_next", jobs.c.priority.desc(), jobs.c.turn, jobs.c.id, jobs.c.run_after)
+_index_of_waiting("ix_jobs_turn", jobs.c.turn, jobs.c.id)
+_index_of_waiting("ix_jobs_submitter_turn", jobs.c.submitted_by, jobs.c.priority, jobs.c.turn)
 
 job_events = Table(
     "job_events",
