@@ -1,0 +1,1 @@
+"""`leastbend demo`: the real service on an invented scenario."""
