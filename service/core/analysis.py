@@ -16,7 +16,7 @@ from service.core.folds import make_folds
 from service.core.judgement import judge
 from service.core.lack_of_fit import lack_of_fit
 from service.core.least_bend import gap_ratios
-from service.core.nested import fit_all, highest_estimable
+from service.core.nested import highest_estimable
 from service.core.observations import Observations
 from service.core.plan import Plan
 from service.core.requirements import answer_requirements
@@ -41,15 +41,13 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     check(observations, plan)
     say("fit", 0, 1)
     top = highest_estimable(observations, plan.max_degree, plan.intercept)
-    weighted = weigh(observations, plan, top=top)
+    reach = highest_estimable(observations, plan.max_degree + TERMS, plan.intercept)
+    weighted = weigh(observations, plan, top=top, reach=reach)
     tried = weighted.fits
     if tried.top < plan.min_degree:
         message = f"values lie too close together to tell a curve of degree {plan.min_degree} from a lower one"
         raise InvalidInput.at("/dataset/x", message)
-    reach = highest_estimable(observations, plan.max_degree + TERMS, plan.intercept)
-    full = tried
-    if reach > tried.top:
-        full = fit_all(observations.x, observations.y, tried.weights, top=reach, intercept=plan.intercept)
+    full = weighted.full
     folds = make_folds(observations, plan.resampling)
     held = cross_validate(tried, folds, lambda done, of: say("cross_validate", done, of))
     say("choose", 0, 1)

@@ -7,11 +7,9 @@ from numpy.polynomial import chebyshev
 
 from service.core.curve import to_t
 from service.core.findings import Findings
-from service.core.nested import NestedFits
+from service.core.nested import GRID, NestedFits
 from service.core.observations import Floats
 from service.core.requirements import allowed_error
-
-GRID = 201
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)

@@ -37,21 +37,24 @@ def describe_candidates(
     tss = float(rss[0]) if fits.intercept else fits.tss
     loo = leave_one_out_errors(fits)
     criteria = (aicc(fits), bic(fits))
+    cvs = _cross_validations(held, tss)
+    largest = np.abs(fits.residuals / np.sqrt(fits.weights)[:, None]).max(axis=0)
+    presses = np.sum(loo * loo, axis=0)
+    total = float(fits.weights.sum())
     out: list[Candidate] = []
     for degree in range(plan.min_degree, plan.max_degree + 1):
         if degree > fits.top:
             out.append(_inestimable(degree, fits))
             continue
         df, value = fits.df(degree), float(rss[degree])
-        press = float(np.sum(loo[:, degree] ** 2))
+        press = float(presses[degree])
         loo_ok = not math.isnan(press)
         spare_total = fits.n - 1 if fits.intercept else fits.n
         one_out = LeaveOneOut(
-            rmse=math.sqrt(press / float(fits.weights.sum())) if loo_ok else None,
+            rmse=math.sqrt(press / total) if loo_ok else None,
             r2=1 - press / tss if loo_ok and tss > 0 else None,
             reason=None if loo_ok else "without one of the points this degree cannot be fitted",
         )
-        unscaled = np.abs(fits.residuals[:, degree]) / np.sqrt(fits.weights)
         a, b = (_finite(c[degree]) for c in criteria)
         out.append(
             Candidate(
@@ -65,10 +68,10 @@ def describe_candidates(
                 bic=b,
                 press=press if loo_ok else None,
                 loo=one_out,
-                cv=_cross_validation(held, degree, tss),
+                cv=cvs[degree],
                 step=_step(fits, degree, rss, float(p_values[degree]), known=plan.known_uncertainty),
                 lack_of_fit=lack_of_fit[degree],
-                max_abs_residual=float(unscaled.max()),
+                max_abs_residual=float(largest[degree]),
                 monotonic=is_monotonic(fits.chebyshev(degree), fits.domain, working_range) if degree else False,
                 estimable=True,
                 reason=_criteria_reason(a, b),
@@ -126,25 +129,50 @@ def _step(fits: NestedFits, degree: int, rss: Floats, p: float, *, known: bool) 
     return Test(f=gain / (float(rss[degree]) / df), df=dfs, p=p)
 
 
-def _cross_validation(held: HeldOut, degree: int, tss: float) -> CrossValidation:
-    used = held.estimable[:, degree]
-    folds, count = used.size, int(used.sum())
-    reason = None if count == folds else f"{folds - count} folds leave too few levels for this degree"
-    if count == 0:
-        return CrossValidation(
-            rmse_mean=None, rmse_sd=None, r2_mean=None, r2_sd=None, folds_used=0, folds=folds, reason=reason
+def _cross_validations(held: HeldOut, tss: float) -> list[CrossValidation]:
+    """By degree 0..top."""
+    folds = held.size.size
+    rmse = np.sqrt(held.sse / held.weight[:, None])
+    used = held.estimable.sum(axis=0).tolist()
+    whole = min(used) == folds
+    mean, sd = _mean_and_sd(rmse) if whole else (np.empty(0), np.empty(0))
+    r2_mean, r2_sd = _r2(held, tss)
+    out: list[CrossValidation] = []
+    for degree, count in enumerate(used):
+        if whole:
+            m, s = float(mean[degree]), float(sd[degree])
+        elif count:
+            part = rmse[held.estimable[:, degree], degree]
+            m, s = (float(v[0]) for v in _mean_and_sd(part[:, None]))
+        else:
+            m = s = math.nan
+        out.append(
+            CrossValidation(
+                rmse_mean=_finite(m),
+                rmse_sd=_finite(s),
+                r2_mean=_finite(r2_mean[degree]),
+                r2_sd=_finite(r2_sd[degree]),
+                folds_used=count,
+                folds=folds,
+                reason=None if count == folds else f"{folds - count} folds leave too few levels for this degree",
+            )
         )
-    rmse = np.sqrt(held.sse[used, degree] / held.weight[used])
-    repeats = int(held.repeat_of.max()) + 1
-    r2: Floats | None = None
-    if count == folds and tss > 0:
-        r2 = 1 - np.bincount(held.repeat_of, weights=held.sse[:, degree], minlength=repeats) / tss
-    return CrossValidation(
-        rmse_mean=float(rmse.mean()),
-        rmse_sd=float(rmse.std(ddof=1)) if count > 1 else None,
-        r2_mean=float(r2.mean()) if r2 is not None else None,
-        r2_sd=float(r2.std(ddof=1)) if r2 is not None and repeats > 1 else None,
-        folds_used=count,
-        folds=folds,
-        reason=reason,
-    )
+    return out
+
+
+def _r2(held: HeldOut, tss: float) -> tuple[Floats, Floats]:
+    """Mean and SD over repeats of 1 - (held-out sum of squares)/(sum of squares about the mean); NaN without value."""
+    if tss <= 0:
+        nothing = np.full(held.sse.shape[1], np.nan)
+        return nothing, nothing
+    first = np.flatnonzero(np.diff(held.repeat_of, prepend=-1))
+    return _mean_and_sd(1 - np.add.reduceat(held.sse, first, axis=0) / tss)
+
+
+def _mean_and_sd(values: Floats) -> tuple[Floats, Floats]:
+    """Mean and sample SD down each column; the SD of one row is NaN."""
+    rows = values.shape[0]
+    mean = values.sum(axis=0) / rows
+    off = values - mean
+    sd = np.sqrt((off * off).sum(axis=0) / (rows - 1)) if rows > 1 else np.full(mean.shape, np.nan)
+    return mean, sd

@@ -46,38 +46,32 @@ def leave_one_out_errors(fits: NestedFits) -> Floats:
 
 def cross_validate(fits: NestedFits, folds: Folds, progress: Callable[[int, int], None] | None = None) -> HeldOut:
     """Hold out every fold once; all degrees 0..top."""
-    f, d = len(folds.members), fits.top + 1
-    sse, training = np.empty((f, d)), np.empty((f, d))
+    f, d = folds.size.size, fits.top + 1
+    sse, training, weight = np.empty((f, d)), np.empty((f, d)), np.empty(f)
     estimable = np.empty((f, d), dtype=bool)
-    sizes = np.array([m.size for m in folds.members], dtype=np.intp)
     mask = _mask(fits)
-    # one row of zeros past the end stands for "no point" where folds of unequal size are padded
+    # one row of zeros past the end stands for "no point" where folds of unequal size are filled up
     q = np.vstack((fits.q, np.zeros((1, fits.q.shape[1]))))
     e = np.vstack((fits.residuals, np.zeros((1, d))))
+    w = np.append(fits.weights, 0.0)
     done = 0
-    for chosen in _batches(sizes, fits.q.shape[1] + d):
-        width = int(sizes[chosen].max())
-        points = np.full((chosen.size, width), fits.n, dtype=np.intp)
-        if np.all(sizes[chosen] == width):
-            points = np.stack([folds.members[i] for i in chosen])
-        else:
-            for row, i in enumerate(chosen):
-                points[row, : sizes[i]] = folds.members[i]
-        held, ok = _held_out(q[points], e[points], mask)
+    for chosen in _batches(folds.size, fits.q.shape[1] + d):
+        points = folds.points(chosen)
+        left = e[points]
+        held, ok = _held_out(q[points], left, mask)
         sse[chosen] = np.einsum("fsd,fsd->fd", held, held)
-        training[chosen] = fits.rss - np.einsum("fsd,fsd->fd", e[points], held)
+        training[chosen] = fits.rss - np.einsum("fsd,fsd->fd", left, held)
         estimable[chosen] = ok
+        weight[chosen] = w[points].sum(axis=1)
         done += chosen.size
         if progress is not None:
             progress(done, f)
     sse[~estimable] = np.nan
     training[~estimable] = np.nan
-    padded = np.append(fits.weights, 0.0)
-    weight = np.array([padded[m].sum() for m in folds.members])
     return HeldOut(
         sse=sse,
         weight=weight,
-        size=sizes,
+        size=folds.size,
         training_rss=np.maximum(training, 0.0),
         repeat_of=folds.repeat_of,
         estimable=estimable,
@@ -92,15 +86,13 @@ def _mask(fits: NestedFits) -> Floats:
 def _batches(sizes: Integers, width: int) -> Iterator[Integers]:
     """Folds of like size together, no batch above the memory bound."""
     order = np.argsort(sizes, kind="stable")
+    ordered = sizes[order]
     start = 0
     while start < order.size:
-        least = int(sizes[order[start]])
-        stop = start
-        while stop < order.size:
-            largest = int(sizes[order[stop]])
-            if largest > 2 * least or (stop > start and (stop + 1 - start) * largest * width > BATCH_NUMBERS):
-                break
-            stop += 1
+        alike = int(np.searchsorted(ordered, 2 * ordered[start], side="right"))
+        # the largest count of folds that keeps count x (largest size) x width within the bound
+        inside = np.arange(1, alike - start + 1) * ordered[start:alike] * width <= BATCH_NUMBERS
+        stop = start + max(1, int(np.count_nonzero(inside)))
         yield np.sort(order[start:stop])
         start = stop
 

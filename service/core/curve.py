@@ -2,9 +2,10 @@
 
 import math
 from fractions import Fraction
+from functools import lru_cache
 
 import numpy as np
-from numpy.polynomial import chebyshev
+from numpy.polynomial import Polynomial, chebyshev
 
 from service.core.exact import ExactFit, exact_fit
 from service.core.nested import EPS, NestedFits
@@ -151,6 +152,35 @@ def slope_range(
 
 def is_monotonic(coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]) -> bool:
     """Strictly monotonic: the slope keeps one sign, zero excluded up to rounding."""
+    if working_range == domain:
+        # the slope lies within its Bernstein coefficients, the first and last of which are its values at the ends
+        bounds = _slope_bernstein(coefficients.size - 1) @ coefficients
+        first, last = float(bounds[0]), float(bounds[-1])
+        if _one_sign(float(bounds.min()), float(bounds.max())):
+            return True
+        if not _one_sign(min(first, last), max(first, last)):
+            return False
     least, greatest, _ = slope_range(coefficients, domain, working_range)
+    return _one_sign(least, greatest)
+
+
+def _one_sign(least: float, greatest: float) -> bool:
     tiny = 1e-13 * max(abs(least), abs(greatest))
-    return greatest > 0 and least > tiny or least < 0 and greatest < -tiny
+    return least > tiny or greatest < -tiny
+
+
+@lru_cache(maxsize=32)
+def _slope_bernstein(degree: int) -> Floats:
+    """From coefficients on T_0..T_degree to Bernstein coefficients of the derivative over [-1, 1].
+
+    Lorentz, Bernstein Polynomials, 1986: row i of the map from powers of u in [0, 1] is C(i, k)/C(m, k).
+    """
+    m = degree - 1
+    rows = []
+    for j in range(degree + 1):
+        slope = chebyshev.Chebyshev.basis(j).deriv().convert(kind=Polynomial)
+        inner = slope(Polynomial([-1.0, 2.0])).coef if j else np.zeros(1)
+        powers = np.zeros(degree)
+        powers[: inner.size] = inner
+        rows.append([sum(math.comb(i, k) / math.comb(m, k) * powers[k] for k in range(i + 1)) for i in range(degree)])
+    return np.array(rows).T

@@ -15,7 +15,7 @@ from service.core.residual_tests import (
 )
 from service.core.resolution import resolution
 from service.core.result import Diagnostics, Points, Statistic
-from service.core.screen import outlier_p
+from service.core.screen import farthest, outlier_p
 
 MOST_POINTS_LISTED = 2000
 
@@ -82,10 +82,10 @@ def _largest(
     fits: NestedFits, degree: int, studentised: Floats, known_uncertainty: bool
 ) -> tuple[Statistic, int | None]:
     method = "largest externally studentised residual, Bonferroni p (Cook & Weisberg 1982, 2.2.2)"
-    if np.all(np.isnan(studentised)):
+    worst = farthest(studentised)
+    if worst is None:
         reason = "no studentised residual can be computed"
         return Statistic(statistic=None, df=None, p=None, method=method, reason=reason), None
-    worst = int(np.nanargmax(np.abs(studentised)))
     value = float(studentised[worst])
     p = outlier_p(value, fits, degree, known_uncertainty=known_uncertainty)
     df = None if known_uncertainty else (float(fits.df(degree) - 1),)

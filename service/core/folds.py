@@ -1,7 +1,6 @@
 """Which points are held out together. Membership comes from scikit-learn's splitters alone."""
 
 import hashlib
-from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -21,13 +20,28 @@ DIGEST_OF = "SHA-256 of the fold number of each point, repeat by repeat, as litt
 class Folds:
     """Fold membership. assignment: (repeats, n), the fold of each point, from 0 in each repeat.
 
-    members: the points of each fold, repeat by repeat; repeat_of: which repeat each fold belongs to.
+    Folds are counted through all repeats: fold i holds the points order[start[i]:start[i] + size[i]] and
+    belongs to repeat repeat_of[i].
     """
 
     assignment: Assignment
-    members: tuple[Integers, ...]
+    order: Integers
+    start: Integers
+    size: Integers
     repeat_of: Integers
     record: FoldRecord
+
+    def points(self, chosen: Integers) -> Integers:
+        """The points of some folds, one fold a row; rows shorter than the longest are filled up with n."""
+        n = self.assignment.shape[1]
+        size = self.size[chosen]
+        across = np.arange(int(size.max()))
+        at = self.start[chosen][:, None] + across
+        short = across >= size[:, None]
+        if not short.any():
+            return np.asarray(self.order[at])
+        at[short] = 0
+        return np.where(short, n, self.order[at])
 
 
 def make_folds(observations: Observations, resampling: Resampling) -> Folds:
@@ -50,24 +64,25 @@ def make_folds(observations: Observations, resampling: Resampling) -> Folds:
 
 def from_assignment(assignment: Assignment, *, scheme: str, seed: int | None, method: str) -> Folds:
     """Folds from a fold number for each point and repeat: shape (repeats, n), numbered from 0."""
-    members: list[Integers] = []
-    repeat_of: list[int] = []
-    for repeat, row in enumerate(assignment):
-        order = np.argsort(row, kind="stable")
-        cuts = np.cumsum(np.bincount(row))[:-1]
-        parts: Sequence[Integers] = np.split(order, cuts)
-        members.extend(parts)
-        repeat_of.extend([repeat] * len(parts))
+    repeats = assignment.shape[0]
+    order = np.argsort(assignment, axis=1, kind="stable").ravel()
+    counts = [np.bincount(row) for row in assignment]
+    size = np.concatenate(counts)
     record = FoldRecord(
         scheme=scheme,
-        folds=len(members) // max(1, len(assignment)),
-        repeats=len(assignment),
+        folds=size.size // repeats,
+        repeats=repeats,
         seed=seed,
         method=f"{method}; digest: {DIGEST_OF}",
         digest=hashlib.sha256(np.ascontiguousarray(assignment, dtype="<i4").tobytes()).hexdigest(),
     )
     return Folds(
-        assignment=assignment, members=tuple(members), repeat_of=np.array(repeat_of, dtype=np.intp), record=record
+        assignment=assignment,
+        order=order.astype(np.intp),
+        start=(np.cumsum(size) - size).astype(np.intp),
+        size=size.astype(np.intp),
+        repeat_of=np.repeat(np.arange(repeats), [c.size for c in counts]),
+        record=record,
     )
 
 

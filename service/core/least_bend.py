@@ -15,7 +15,6 @@ from service.core.observations import Floats, Integers
 from service.core.tails import f_tail, z_two_sided
 
 SHARES = (0.70, 0.20, 0.07, 0.03)  # of a(n), for a look 1, 2, 3, 4 terms ahead
-GRID = 201  # points over the range on which the prediction variance is searched
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -58,8 +57,8 @@ def gap_ratios(fits: NestedFits) -> Floats:
 
     Above 1 the curve is less certain somewhere (in a gap, as a rule) than a single reading is.
     """
-    grid = np.linspace(fits.domain[0], fits.domain[1], GRID)
-    h = np.cumsum(fits.orthonormal_at(grid) ** 2, axis=1)
+    shapes = fits.orthonormal_on_grid()
+    h = np.cumsum(shapes * shapes, axis=1)
     g = np.sqrt(h.max(axis=0) * float(fits.weights.min()))
     return g if fits.intercept else np.concatenate(([0.0], g))
 

@@ -5,14 +5,16 @@ of Q span the polynomials of each lower degree, so residuals, leverages and sums
 degrees are cumulative sums over columns (Golub & Van Loan, Matrix Computations, 4th ed., 5.3).
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import lru_cache
 
 import numpy as np
-from scipy.linalg import solve_triangular
+from scipy.linalg import lapack
 
 from service.core.observations import Floats, Observations
 
 EPS = float(np.finfo(np.float64).eps)
+GRID = 201  # even points over a range, on which curves and variances are searched for their largest value
 RANK_TOLERANCE = 1e-12  # of a column's length: below it the column adds nothing double precision can hold
 
 
@@ -21,7 +23,7 @@ class NestedFits:
     """All least-squares fits of degree 0..top to one dataset under one weighting.
 
     Arrays have one column or entry per degree 0..top. Without intercept, degree 0 is the zero curve.
-    q: (n, p) orthonormal; r: (p, p) upper triangular; qty: (p,) coefficients on q.
+    q: (n, p) orthonormal; r: (p, p) upper triangular, with its inverse; qty: (p,) coefficients on q.
     residuals: (n, top+1), scaled by sqrt(weight); leverage: (n, top+1); rss: (top+1,).
     weights: (n,), 1/variance up to a factor. tss: about the weighted mean, or about 0 without intercept.
     rounding_rss: a weighted sum of squares that rounding of x and y alone can cause.
@@ -35,6 +37,7 @@ class NestedFits:
     top: int
     q: Floats
     r: Floats
+    r_inverse: Floats
     qty: Floats
     residuals: Floats
     leverage: Floats
@@ -61,8 +64,31 @@ class NestedFits:
 
     def orthonormal_at(self, x: Floats) -> Floats:
         """The polynomials whose weighted values at the data are the columns of q, at x: (len(x), p)."""
-        return np.asarray(
-            solve_triangular(self.r, self.basis_at(x).T, trans="T", check_finite=False).T, dtype=np.float64
+        return np.asarray(self.basis_at(x) @ self.r_inverse)
+
+    def orthonormal_on_grid(self) -> Floats:
+        """The same on GRID even points over the data's range: (GRID, p)."""
+        columns = _chebyshev_on_grid(self.top)
+        if not self.intercept:
+            lo, hi = self.domain
+            columns = columns[: self.top] * (np.linspace(lo, hi, GRID) / max(abs(lo), abs(hi)))
+        return np.asarray(columns.T @ self.r_inverse)
+
+    def up_to(self, top: int) -> "NestedFits":
+        """The same fits as far as degree `top`: parts of the same arrays."""
+        if top >= self.top:
+            return self
+        c = self.columns(top)
+        return replace(
+            self,
+            top=top,
+            q=self.q[:, :c],
+            r=self.r[:c, :c],
+            r_inverse=self.r_inverse[:c, :c],
+            qty=self.qty[:c],
+            residuals=self.residuals[:, : top + 1],
+            leverage=self.leverage[:, : top + 1],
+            rss=self.rss[: top + 1],
         )
 
     def chebyshev(self, degree: int) -> Floats:
@@ -70,14 +96,15 @@ class NestedFits:
         c = self.columns(degree)
         if c == 0:
             return np.zeros(1)
-        b = np.asarray(solve_triangular(self.r[:c, :c], self.qty[:c], check_finite=False))
-        return to_chebyshev(self.domain, c, self.intercept) @ b
+        b = self.r_inverse[:c, :c] @ self.qty[:c]
+        return b if self.intercept else to_chebyshev(self.domain, c) @ b
 
     def unscaled_covariance(self, degree: int) -> Floats:
         """Covariance of `chebyshev(degree)` for unit residual variance: (degree+1, degree+1)."""
         c = self.columns(degree)
-        inverse = np.asarray(solve_triangular(self.r[:c, :c], np.eye(c), check_finite=False))
-        root = to_chebyshev(self.domain, c, self.intercept) @ inverse
+        root = self.r_inverse[:c, :c]
+        if not self.intercept:
+            root = to_chebyshev(self.domain, c) @ root
         return np.asarray(root @ root.T)
 
 
@@ -99,10 +126,16 @@ def basis(x: Floats, domain: tuple[float, float], top: int, intercept: bool) -> 
     return (columns[:top] * (x / max(abs(lo), abs(hi)))).T
 
 
-def to_chebyshev(domain: tuple[float, float], columns: int, intercept: bool) -> Floats:
-    """Matrix from coefficients on `basis` to coefficients on T_0..T_degree."""
-    if intercept:
-        return np.eye(columns)
+@lru_cache(maxsize=32)
+def _chebyshev_on_grid(top: int) -> Floats:
+    """T_0..T_top at GRID even points from -1 to 1: (top+1, GRID)."""
+    grid = np.polynomial.chebyshev.chebvander(np.linspace(-1.0, 1.0, GRID), top).T
+    grid.flags.writeable = False
+    return np.asarray(grid, dtype=np.float64)
+
+
+def to_chebyshev(domain: tuple[float, float], columns: int) -> Floats:
+    """Without intercept: matrix from coefficients on `basis` to coefficients on T_0..T_degree."""
     lo, hi = domain
     scale = max(abs(lo), abs(hi))
     middle, half = (lo + hi) / 2 / scale, (hi - lo) / 2 / scale
@@ -145,11 +178,10 @@ def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool 
     qty = qty + again
     left -= q @ again
     p = qty.size
-    parts = q * qty
-    residuals = np.empty((z.size, p + 1))
-    residuals[:, p] = left
-    for j in range(p - 1, -1, -1):
-        np.add(residuals[:, j + 1], parts[:, j], out=residuals[:, j])
+    steps = np.empty((z.size, p + 1))
+    steps[:, 0] = left
+    steps[:, 1:] = (q * qty)[:, ::-1]
+    residuals = np.cumsum(steps, axis=1)[:, ::-1]
     squares = np.concatenate(([0.0], np.cumsum((qty * qty)[::-1])))[::-1]
     rss = float(left @ left) + squares
     leverage = np.cumsum(q * q, axis=1)
@@ -168,6 +200,7 @@ def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool 
         top=top,
         q=q,
         r=r,
+        r_inverse=lapack.dtrtri(r)[0],
         qty=qty,
         residuals=residuals,
         leverage=leverage,

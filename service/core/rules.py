@@ -5,7 +5,7 @@ import numpy as np
 from service.core.criteria import aicc, bic
 from service.core.cross_validation import HeldOut
 from service.core.nested import NestedFits
-from service.core.observations import Floats
+from service.core.observations import Floats, Integers
 from service.core.plan import Rule
 from service.core.result import RuleChoice
 
@@ -57,17 +57,23 @@ def _one_standard_error(held: HeldOut, min_degree: int) -> RuleChoice:
     lowest = _least(rule, pooled, min_degree)
     if lowest.degree is None:
         return lowest
-    fold_mean = held.sse[:, lowest.degree] / held.weight
-    errors = [
-        float(np.std(part, ddof=1)) / np.sqrt(part.size)
-        for part in (fold_mean[held.repeat_of == r] for r in range(int(held.repeat_of.max()) + 1))
-        if part.size > 1
-    ]
-    if not errors:
+    error = _standard_error(held.sse[:, lowest.degree] / held.weight, held.repeat_of)
+    if error is None:
         return RuleChoice(rule=rule, degree=None, reason="one fold has no standard error")
-    limit = pooled[lowest.degree] + float(np.mean(errors))
+    limit = pooled[lowest.degree] + error
     within = np.flatnonzero(pooled[min_degree:] <= limit)
     return RuleChoice(rule=rule, degree=int(within[0]) + min_degree)
+
+
+def _standard_error(fold_mean: Floats, repeat_of: Integers) -> float | None:
+    """Of the mean over the folds of a repeat, averaged over the repeats that hold two folds or more."""
+    count = np.bincount(repeat_of)
+    off = fold_mean - (np.bincount(repeat_of, weights=fold_mean) / count)[repeat_of]
+    usable = count > 1
+    if not usable.any():
+        return None
+    squares, k = np.bincount(repeat_of, weights=off * off)[usable], count[usable]
+    return float(np.mean(np.sqrt(squares / (k - 1) / k)))
 
 
 def stability_by_repeat(rule: Rule, held: HeldOut, min_degree: int) -> list[int]:

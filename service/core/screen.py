@@ -66,6 +66,14 @@ def studentised(fits: NestedFits, degree: int, *, known_uncertainty: bool = Fals
         return np.asarray(e / np.sqrt(spare * left / df))
 
 
+def farthest(values: Floats) -> int | None:
+    """Index of the value farthest from 0, NaN apart; None where all are NaN."""
+    size = np.abs(values)
+    size[np.isnan(size)] = -1.0
+    place = int(size.argmax())
+    return place if size[place] >= 0 else None
+
+
 def outlier_p(value: float, fits: NestedFits, degree: int, *, known_uncertainty: bool = False) -> float:
     """Bonferroni p-value of the largest studentised residual."""
     if known_uncertainty:
@@ -112,10 +120,9 @@ def _wildest(fits: NestedFits, chosen: int, known_uncertainty: bool) -> tuple[in
         if degree > fits.top or (not fits.intercept and degree == 0):
             continue
         t = studentised(fits, degree, known_uncertainty=known_uncertainty)
-        t = np.where(fits.leverage[:, degree] < MOST_LEVERAGE, t, np.nan)
-        if np.all(np.isnan(t)):
+        place = farthest(np.where(fits.leverage[:, degree] < MOST_LEVERAGE, t, np.nan))
+        if place is None:
             continue
-        place = int(np.nanargmax(np.abs(t)))
         p = outlier_p(float(t[place]), fits, degree, known_uncertainty=known_uncertainty)
         if p < BONFERRONI and (best is None or p < best[3]):
             best = (place, degree, float(t[place]), p)

@@ -4,14 +4,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from service.core.nested import NestedFits
+from service.core.nested import GRID, NestedFits
 from service.core.observations import Floats
 from service.core.result import UnseenBend, UnseenTerm
 from service.core.tails import t_quantile, z_quantile
 
 TERMS = 3
 BOUND = 0.95
-GRID = 201
 METHOD = (
     "upper 95 % bound of each of the next terms (orthonormal polynomial), times its largest value in the working "
     "range; root of the sum of squares"
@@ -43,8 +42,11 @@ def unseen_bend(
     first = fits.columns(degree)
     bounds: list[float] = []
     terms: list[UnseenTerm] = []
-    grid = np.linspace(working_range[0], working_range[1], GRID)
-    shapes = np.abs(fits.orthonormal_at(grid)).max(axis=0)
+    if working_range == fits.domain:
+        on_grid = fits.orthonormal_on_grid()
+    else:
+        on_grid = fits.orthonormal_at(np.linspace(working_range[0], working_range[1], GRID))
+    shapes = np.abs(on_grid).max(axis=0)
     for j in range(degree + 1, min(degree + TERMS, fits.top) + 1):
         column = fits.columns(j) - 1
         b, df = float(fits.qty[column]), fits.df(j)

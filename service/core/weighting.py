@@ -23,8 +23,12 @@ EFFECTIVE_ROUNDS = 20
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)
 class Weighted:
-    """The nested fits under the weights used, with the choice record and, if made already, the walk."""
+    """The nested fits under the weights used, with the choice record and, if made already, the walk.
 
+    full: as high as the data allow, a few terms above what the plan tries, to bound what may hide there.
+    """
+
+    full: NestedFits
     fits: NestedFits
     choice: WeightChoice
     walked: Walked | None
@@ -32,18 +36,20 @@ class Weighted:
     """True when the weights are 1/variance in the unit of y, so that a chi-square has meaning."""
 
 
-def weigh(observations: Observations, plan: Plan, *, top: int) -> Weighted:
-    """Fit every degree under the weights that the plan asks for (checked beforehand against the data)."""
+def weigh(observations: Observations, plan: Plan, *, top: int, reach: int) -> Weighted:
+    """Fit every degree under the weights that the plan asks for (checked beforehand against the data).
+
+    top: the highest degree to try; reach: the highest to fit.
+    """
     asked = plan.weights
     if asked == "u_y" or (asked == "auto" and observations.u_y is not None):
-        return _from_uncertainty(observations, plan, top)
+        return _from_uncertainty(observations, plan, top, reach)
     if asked == "auto":
-        return _compare(observations, plan, top)
-    fits = fit_all(
-        observations.x, observations.y, power_weights(observations.x, asked), top=top, intercept=plan.intercept
-    )
+        return _compare(observations, plan, top, reach)
+    x, y = observations.x, observations.y
+    full = fit_all(x, y, power_weights(x, asked), top=reach, intercept=plan.intercept)
     choice = WeightChoice(asked=asked, used=asked, common_degree=None, compared=(), why="as the plan asks")
-    return Weighted(fits=fits, choice=choice, walked=None, absolute=False)
+    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=False)
 
 
 def power_weights(x: Floats, name: str) -> Floats:
@@ -66,10 +72,11 @@ def restricted_log_likelihood(fits: NestedFits, degree: int) -> float:
     return -0.5 * (df * math.log(rss / df) + log_det - float(np.sum(np.log(fits.weights))))
 
 
-def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
+def _compare(observations: Observations, plan: Plan, top: int, reach: int) -> Weighted:
     x, y = observations.x, observations.y
     size = np.abs(x)
-    equal = fit_all(x, y, np.ones_like(x), top=top, intercept=plan.intercept)
+    full = fit_all(x, y, np.ones_like(x), top=reach, intercept=plan.intercept)
+    equal = full.up_to(top)
     why = ""
     if size.min() == 0:
         why = "equal weights: x holds 0, where 1/x has no value"
@@ -79,11 +86,10 @@ def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
         why = "equal weights: the residuals are at the level of rounding and cannot tell"
     if why:
         choice = WeightChoice(asked="auto", used="equal", common_degree=None, compared=(), why=why)
-        return Weighted(fits=equal, choice=choice, walked=None, absolute=False)
+        return Weighted(full=full, fits=equal, choice=choice, walked=None, absolute=False)
     names = ("equal", "1/x", "1/x^2")
-    all_fits = [equal] + [
-        fit_all(x, y, power_weights(x, name), top=top, intercept=plan.intercept) for name in names[1:]
-    ]
+    fulls = [full] + [fit_all(x, y, power_weights(x, name), top=reach, intercept=plan.intercept) for name in names[1:]]
+    all_fits = [f.up_to(top) for f in fulls]
     walks = [choose_with_screen(fits, known_uncertainty=False) for fits in all_fits]
     least = 0 if plan.intercept else 1
     common = min(max(least, *(w.degree for w in walks)), *(f.top for f in all_fits))
@@ -102,30 +108,29 @@ def _compare(observations: Observations, plan: Plan, top: int) -> Weighted:
     else:
         why = f"{names[best]}: gains {gains[best]:.2f} in restricted log-likelihood over equal weights"
     choice = WeightChoice(asked="auto", used=names[best], common_degree=common, compared=compared, why=why)
-    return Weighted(fits=all_fits[best], choice=choice, walked=walks[best], absolute=False)
+    return Weighted(full=fulls[best], fits=all_fits[best], choice=choice, walked=walks[best], absolute=False)
 
 
-def _from_uncertainty(observations: Observations, plan: Plan, top: int) -> Weighted:
+def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: int) -> Weighted:
     assert observations.u_y is not None
     x, y = observations.x, observations.y
     variance = observations.u_y**2
-    fits = fit_all(x, y, 1.0 / variance, top=top, intercept=plan.intercept)
+    full = fit_all(x, y, 1.0 / variance, top=reach, intercept=plan.intercept)
     used, why = "u_y", "1/u_y^2, from the uncertainties given"
-    walked = None
     if observations.u_x is not None:
         used, why = "u_y and u_x", "1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given"
         for _ in range(EFFECTIVE_ROUNDS):
+            fits = full.up_to(top)
             walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
             degree = min(max(walked.degree, plan.min_degree), fits.top)
             slope = slope_at(fits, degree, x)
             new = 1.0 / (variance + (slope * observations.u_x) ** 2)
             change = float(np.max(np.abs(new / fits.weights - 1)))
-            fits = fit_all(x, y, new, top=top, intercept=plan.intercept)
-            walked = None
+            full = fit_all(x, y, new, top=reach, intercept=plan.intercept)
             if change < 1e-10:
                 break
     choice = WeightChoice(asked=plan.weights, used=used, common_degree=None, compared=(), why=why)
-    return Weighted(fits=fits, choice=choice, walked=walked, absolute=True)
+    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=True)
 
 
 def slope_at(fits: NestedFits, degree: int, x: Floats) -> Floats:

@@ -83,7 +83,7 @@ def draw(rng: np.random.Generator) -> Calibration:
         degree = int(rng.integers(0, min(4, np.unique(x).size - 2, x.size - 3) + 1))
         power = ("0.8", "0.99", "strong")[int(rng.integers(3))]
         coefficients = _coefficients(rng, degree, power, x.size, quiet=errors == "nearly noise-free")
-        at_points, at_grid = _orthonormal(x, sd, grid, degree)
+        at_points, at_grid = orthonormal(x, sd, grid, degree)
         values, truth = at_points @ coefficients, at_grid @ coefficients
     y = values + sd * _noise(rng, errors, x.size)
     if errors == "rounded":
@@ -120,7 +120,7 @@ def _points(rng: np.random.Generator) -> Floats:
     return np.repeat(np.sort(at), repeats)
 
 
-def _orthonormal(x: Floats, sd: Floats, grid: Floats, degree: int) -> tuple[Floats, Floats]:
+def orthonormal(x: Floats, sd: Floats, grid: Floats, degree: int) -> tuple[Floats, Floats]:
     """Orthonormal polynomials 0..degree under weights 1/sd^2, at the points and on the grid."""
 
     def basis(at: Floats) -> Floats:
