@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy import Connection, Engine, create_engine, event, make_url
 from sqlalchemy.exc import DBAPIError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
@@ -18,6 +18,7 @@ from service.errors import Overloaded, Unusable
 from service.settings import Settings
 
 BUSY_SECONDS = 30
+CONNECT_SECONDS = 5
 READERS = 8
 FILE_NAME = "leastbend.db"
 PASSING_FAILURES = (
@@ -62,12 +63,20 @@ class Database:
 
 
 def open_database(settings: Settings, *, durable: bool) -> Database:
-    """Connect lazily. `durable`: a commit survives a power failure (SQLite synchronous=FULL).
+    """Connect lazily. `durable`: a commit survives a power failure (SQLite synchronous=FULL, PostgreSQL
+    synchronous_commit=on).
 
     Workers pass False: a claim or finish lost to a power failure only runs the job again.
     """
     if settings.database_url is not None:
-        engine = create_engine(settings.database_url, pool_size=READERS, max_overflow=READERS, pool_pre_ping=True)
+        engine = create_engine(
+            settings.database_url,
+            pool_size=READERS,
+            max_overflow=READERS,
+            pool_timeout=BUSY_SECONDS,
+            pool_pre_ping=True,
+            connect_args=postgres_options(settings.database_url, durable=durable),
+        )
         return Database(reader=engine, writer=engine)
     path = prepare_directory(settings.data_dir) / FILE_NAME
     synchronous = "FULL" if durable else "NORMAL"
@@ -75,6 +84,14 @@ def open_database(settings: Settings, *, durable: bool) -> Database:
         reader=_sqlite(path, begin="BEGIN", synchronous=synchronous, connections=READERS),
         writer=_sqlite(path, begin="BEGIN IMMEDIATE", synchronous=synchronous, connections=1),
     )
+
+
+def postgres_options(url: str, *, durable: bool) -> dict[str, Any]:
+    """Parameters of a connection besides those of the URL, whose own `options` are kept."""
+    asked = make_url(url).query.get("options", "")
+    given = asked if isinstance(asked, str) else " ".join(asked)
+    options = given if durable else f"{given} -c synchronous_commit=off"
+    return {"connect_timeout": CONNECT_SECONDS, "options": options.strip()}
 
 
 def prepare_directory(directory: Path) -> Path:

@@ -10,12 +10,14 @@ from typing import Any
 
 import psycopg
 from huey import Huey, PostgresHuey, SqliteHuey
+from psycopg.conninfo import make_conninfo
 from sqlalchemy import make_url
 
 from service.settings import Settings
-from service.store.database import BUSY_SECONDS, prepare_directory
+from service.store.database import BUSY_SECONDS, postgres_options, prepare_directory
 
 FILE_NAME = "queue.db"
+ADVISORY_LOCK = 0x1EA57BE4E  # any fixed number but that of the migrations
 FAILURES = (sqlite3.Error, psycopg.Error, OSError)
 
 
@@ -67,6 +69,8 @@ def open_transport(settings: Settings) -> Transport:
     if settings.database_url is None:
         path = prepare_directory(settings.data_dir) / FILE_NAME
         return Transport(SqliteHuey("leastbend", filename=str(path), fsync=False, timeout=BUSY_SECONDS, **common))
-    url = make_url(settings.database_url).set(drivername="postgresql")
-    dsn = url.render_as_string(hide_password=False)
-    return Transport(PostgresHuey("leastbend", dsn=dsn, table_prefix="leastbend_queue", **common))
+    url = make_url(settings.database_url).set(drivername="postgresql").render_as_string(hide_password=False)
+    dsn = make_conninfo(url, **postgres_options(settings.database_url, durable=False))
+    with psycopg.connect(dsn) as connection:  # of two processes that start at once, one makes the tables
+        connection.execute("SELECT pg_advisory_xact_lock(%s)", (ADVISORY_LOCK,))
+        return Transport(PostgresHuey("leastbend", dsn=dsn, table_prefix="leastbend_queue", **common))

@@ -58,7 +58,8 @@ class JobWorker(Worker):  # type: ignore[misc]  # huey has no types
             if not self._away:
                 logger.warning("the queue does not answer: %s", error)
             self._away = True
-            self.stop_flag.wait(AWAY_SECONDS)
+            if self._desk is None or not self._desk.work_once():  # the table is the truth: look there unasked
+                self.stop_flag.wait(AWAY_SECONDS)
             return
         self._away = False
         if received and self._desk is not None:

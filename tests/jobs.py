@@ -1,0 +1,80 @@
+"""Jobs for the tests of store and worker: small calibrations, put in as the API puts them in."""
+
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+from typing import Any
+
+import numpy as np
+from sqlalchemy import func, select
+
+from service.core.plan import Plan
+from service.settings import Settings
+from service.store import events, jobs
+from service.store.database import Database
+from service.store.records import Claim, DatasetContent, JobRecord
+from service.store.tables import results, verdicts
+from service.store.transport import Transport
+from service.workflows.provenance import Machine
+from service.workflows.run import take_job
+from service.workflows.submit import Submission, submit_job
+
+START = datetime(2030, 1, 1, tzinfo=UTC)
+MACHINE = Machine(versions={"python": "3"}, blas=[], platform="test")
+
+
+def at(seconds: float) -> datetime:
+    """A moment of the injected clock."""
+    return START + timedelta(seconds=seconds)
+
+
+def calibration(seed: int = 0, *, points: int = 12, subject: str | None = None) -> DatasetContent:
+    """A slightly bent calibration with normal errors; other seeds, other data."""
+    random = np.random.default_rng(seed)
+    x = np.linspace(0.0, 10.0, points)
+    y = 1.0 + 2.0 * x + 0.03 * x**2 + random.normal(0.0, 0.05, points)
+    return DatasetContent(subject=subject or f"gauge-{seed}", x=x, y=y)
+
+
+@dataclass(frozen=True)
+class Desk:
+    """Puts jobs in, takes them and looks at them, at given times."""
+
+    database: Database
+    transport: Transport
+    settings: Settings
+
+    def put(self, seed: int = 0, *, by: str = "anna", priority: int = 0, seconds: float = 0, **more: Any) -> str:
+        """Id of a new job."""
+        plan = more.pop("plan", Plan())
+        asked = Submission(submitted_by=by, plan=plan, dataset=calibration(seed, **more), priority=priority)
+        return submit_job(self.database, self.transport, self.settings, asked, now=at(seconds))
+
+    def take(self, worker: str = "w1", *, seconds: float = 0, stalest: bool = False) -> Claim | None:
+        """Claim the next job."""
+        return take_job(self.database, self.settings, worker=worker, now=at(seconds), stalest=stalest)
+
+    def took(self, worker: str = "w1", *, seconds: float = 0) -> Claim:
+        """Claim the next job, of which there must be one."""
+        claim = self.take(worker, seconds=seconds)
+        assert claim is not None
+        return claim
+
+    def job(self, job_id: str) -> JobRecord:
+        """Its row."""
+        with self.database.read() as connection:
+            found = jobs.find(connection, job_id)
+        assert found is not None
+        return found
+
+    def history(self, job_id: str) -> list[str]:
+        """Kinds of its events, in order."""
+        with self.database.read() as connection:
+            return [kind for kind, _, _ in events.of_job(connection, job_id)]
+
+    def recorded(self) -> tuple[int, int]:
+        """How many results and verdicts there are."""
+        with self.database.read() as connection:
+            return (
+                connection.execute(select(func.count()).select_from(results)).scalar_one(),
+                connection.execute(select(func.count()).select_from(verdicts)).scalar_one(),
+            )
