@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import chebyshev
 
-from service.core.curve import to_t
+from service.core.curve import derivative, to_t
 from service.core.findings import Findings
 from service.core.nested import GRID, NestedFits
 from service.core.observations import Floats
@@ -49,7 +49,7 @@ def bend_limits(found: Findings) -> list[BendLimit]:
             slopes = np.full(x.shape, found.least_slope or 0.0)
             if pointwise:
                 lo, hi = found.full.domain
-                first = chebyshev.chebder(found.coefficients) * (2 / (hi - lo))
+                first = derivative(found.coefficients) * (2 / (hi - lo))
                 slopes = np.abs(chebyshev.chebval(to_t(x, found.full.domain), first))
             allowed = allowed * slopes
         keep = np.isfinite(allowed) & (allowed > 0)

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from service.core.cross_validation import HeldOut
-from service.core.least_bend import size_under_null, term_p_values, walk_many
+from service.core.least_bend import BELOW_ANY_LEVEL, size_under_null, term_p_values, walk_many
 from service.core.nested import NestedFits, fit_all
 from service.core.observations import Floats, Integers
 from service.core.plan import RULES, Plan
@@ -198,9 +198,15 @@ def _stability(fits: NestedFits, held: HeldOut, plan: Plan, chosen: int, walked:
 
 
 def _picks_without_folds(fits: NestedFits, rss: Floats, size: Floats, plan: Plan, walked: Walked) -> Integers:
-    columns = np.array([fits.columns(d) for d in range(fits.top + 1)], dtype=np.float64)
+    columns = fits.n - fits.all_df()
     if plan.rule == "least_bend":
-        p = term_p_values(rss, size[:, None] - columns, fits.rounding_rss, known_uncertainty=plan.known_uncertainty)
+        p = term_p_values(
+            rss,
+            size[:, None] - columns,
+            fits.rounding_rss,
+            known_uncertainty=plan.known_uncertainty,
+            least_f=BELOW_ANY_LEVEL,
+        )
         return walk_many(p, walked.factors, size)
     k = columns + 1
     floor = np.maximum(rss, fits.rounding_rss + 1e-300)

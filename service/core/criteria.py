@@ -25,9 +25,9 @@ def aicc(fits: NestedFits) -> Floats:
     """AIC + 2k(k+1)/(n-k-1) by degree; NaN where n - k - 1 < 1 or the likelihood is unbounded."""
     k = _k(fits)
     spare = fits.n - k - 1
-    with np.errstate(divide="ignore", invalid="ignore"):
-        value = -2 * log_likelihood(fits) + 2 * k + 2 * k * (k + 1) / spare
-    return np.where(spare > 0, value, np.nan)
+    usable = spare > 0
+    value = -2 * log_likelihood(fits) + 2 * k + 2 * k * (k + 1) / np.where(usable, spare, 1.0)
+    return np.where(usable, value, np.nan)
 
 
 def bic(fits: NestedFits) -> Floats:
@@ -36,4 +36,4 @@ def bic(fits: NestedFits) -> Floats:
 
 
 def _k(fits: NestedFits) -> Floats:
-    return np.array([fits.columns(d) + 1 for d in range(fits.top + 1)], dtype=np.float64)
+    return np.asarray(fits.n - fits.all_df() + 1)

@@ -40,8 +40,7 @@ class HeldOut:
 def leave_one_out_errors(fits: NestedFits) -> Floats:
     """e / (1 - h) for every degree, scaled by sqrt(weight): (n, top+1); NaN where 1 - h vanishes."""
     spare = 1.0 - fits.leverage
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(spare > SINGULAR, fits.residuals / spare, np.nan)
+    return fits.residuals / np.where(spare > SINGULAR, spare, np.nan)
 
 
 def cross_validate(fits: NestedFits, folds: Folds, progress: Callable[[int, int], None] | None = None) -> HeldOut:
@@ -66,8 +65,9 @@ def cross_validate(fits: NestedFits, folds: Folds, progress: Callable[[int, int]
         done += chosen.size
         if progress is not None:
             progress(done, f)
-    sse[~estimable] = np.nan
-    training[~estimable] = np.nan
+    if not estimable.all():
+        sse[~estimable] = np.nan
+        training[~estimable] = np.nan
     return HeldOut(
         sse=sse,
         weight=weight,
@@ -79,8 +79,8 @@ def cross_validate(fits: NestedFits, folds: Folds, progress: Callable[[int, int]
 
 
 def _mask(fits: NestedFits) -> Floats:
-    columns = np.array([fits.columns(d) for d in range(fits.top + 1)])
-    return (np.arange(fits.q.shape[1])[:, None] < columns[None, :]).astype(np.float64)
+    columns = fits.n - fits.all_df()
+    return (np.arange(fits.q.shape[1])[:, None] < columns).astype(np.float64)
 
 
 def _batches(sizes: Integers, width: int) -> Iterator[Integers]:
@@ -109,13 +109,17 @@ def _held_out(q: Floats, e: Floats, mask: Floats) -> tuple[Floats, npt.NDArray[n
             factor, pivots = _guarded_cholesky(m)
     except np.linalg.LinAlgError:
         factor, pivots = _guarded_cholesky(m)
-    at = np.linalg.solve(factor, qt)
-    inner = (at @ e) * mask
-    held = e + at.transpose(0, 2, 1) @ inner
+    at = qt.copy()  # becomes L^-1 Q', by forward substitution on all folds at once
+    for j in range(p):
+        if j:
+            at[:, j] -= np.einsum("fk,fks->fs", factor[:, j, :j], at[:, :j])
+        at[:, j] /= factor[:, j, j, None]
+    held = e + at.transpose(0, 2, 1) @ ((at @ e) * mask)
     # a degree is estimable when all pivots of its leading block are
+    if pivots.min() > SINGULAR:
+        return held, np.ones((q.shape[0], mask.shape[1]), dtype=bool)
     good = np.logical_and.accumulate(pivots > SINGULAR, axis=1)
-    bad_columns = (~good).astype(np.float64) @ mask
-    return held, bad_columns == 0
+    return held, (~good).astype(np.float64) @ mask == 0
 
 
 def _guarded_cholesky(m: Floats) -> tuple[Floats, Floats]:

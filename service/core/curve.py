@@ -136,10 +136,12 @@ def slope_range(
     The extremes of p' lie at the ends or at real roots of p''; the roots are found, not sampled.
     """
     lo, hi = domain
-    first = chebyshev.chebder(coefficients) * (2 / (hi - lo))
+    first = derivative(coefficients) * (2 / (hi - lo))
     ends = to_t(np.array(working_range), domain)
     places = [float(ends[0]), float(ends[1])]
-    second = np.trim_zeros(chebyshev.chebder(first), "b") if first.size > 1 else np.zeros(0)
+    second = derivative(first)
+    while second.size > 1 and second[-1] == 0:
+        second = second[:-1]
     if second.size > 1:
         roots = chebyshev.chebroots(second)
         real = roots[np.abs(roots.imag) < 1e-7 * (1 + np.abs(roots.real))].real
@@ -167,6 +169,18 @@ def is_monotonic(coefficients: Floats, domain: tuple[float, float], working_rang
 def _one_sign(least: float, greatest: float) -> bool:
     tiny = 1e-13 * max(abs(least), abs(greatest))
     return least > tiny or greatest < -tiny
+
+
+def derivative(coefficients: Floats) -> Floats:
+    """Coefficients on T_j of the derivative by t; [0] for a constant."""
+    return np.asarray(_derivative_matrix(coefficients.size - 1) @ coefficients)
+
+
+@lru_cache(maxsize=32)
+def _derivative_matrix(degree: int) -> Floats:
+    if degree == 0:
+        return np.zeros((1, 1))
+    return np.asarray(chebyshev.chebder(np.eye(degree + 1)))
 
 
 @lru_cache(maxsize=32)

@@ -41,7 +41,7 @@ class Folds:
         if not short.any():
             return np.asarray(self.order[at])
         at[short] = 0
-        return np.where(short, n, self.order[at])
+        return np.asarray(np.where(short, n, self.order[at]), dtype=np.intp)
 
 
 def make_folds(observations: Observations, resampling: Resampling) -> Folds:

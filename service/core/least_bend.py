@@ -14,6 +14,7 @@ from service.core.nested import NestedFits
 from service.core.observations import Floats, Integers
 from service.core.tails import f_tail, z_two_sided
 
+BELOW_ANY_LEVEL = 4.0  # F below this has p above 0.045 at any df, and no level exceeds 0.06 x 0.70
 SHARES = (0.70, 0.20, 0.07, 0.03)  # of a(n), for a look 1, 2, 3, 4 terms ahead
 
 
@@ -34,22 +35,27 @@ def spending(n: int) -> float:
     return min(0.06, 0.2 / math.sqrt(n))
 
 
-def term_p_values(rss: Floats, df: Floats, rounding_rss: float, *, known_uncertainty: bool) -> Floats:
+def term_p_values(
+    rss: Floats, df: Floats, rounding_rss: float, *, known_uncertainty: bool, least_f: float = 0.0
+) -> Floats:
     """p of each term alone: F(1, df_j), or z when the variance is known.
 
     rss: (..., top+1) by degree; df: residual degrees of freedom by degree, same last axis. p[..., 0]
     is 1. A term that brings the residuals down to rounding has p = 0; terms beyond it have p = 1.
+    Terms whose F (or z squared) is below `least_f` are given p = 1 without working it out.
     """
     gain = np.maximum(rss[..., :-1] - rss[..., 1:], 0.0)
     exact = rss <= rounding_rss
-    if known_uncertainty:
-        p = z_two_sided(np.sqrt(gain))
-    else:
-        mean_square = np.where(exact[..., 1:], 1.0, rss[..., 1:]) / df[..., 1:]
-        p = f_tail(gain / mean_square, 1, df[..., 1:])
-        p = np.where(exact[..., 1:], 0.0, p)
-    p = np.where(exact[..., :-1], 1.0, p)
-    return np.concatenate((np.ones((*p.shape[:-1], 1)), p), axis=-1)
+    df = np.broadcast_to(df, rss.shape)[..., 1:]
+    out = np.ones(rss.shape)
+    p = out[..., 1:]
+    f = gain if known_uncertainty else gain * df / np.where(exact[..., 1:], 1.0, rss[..., 1:])
+    worth = f >= least_f
+    p[worth] = z_two_sided(np.sqrt(f[worth])) if known_uncertainty else f_tail(f[worth], 1, df[worth])
+    if not known_uncertainty:
+        p[exact[..., 1:]] = 0.0
+    p[exact[..., :-1]] = 1.0
+    return out
 
 
 def gap_ratios(fits: NestedFits) -> Floats:
@@ -58,8 +64,8 @@ def gap_ratios(fits: NestedFits) -> Floats:
     Above 1 the curve is less certain somewhere (in a gap, as a rule) than a single reading is.
     """
     shapes = fits.orthonormal_on_grid()
-    h = np.cumsum(shapes * shapes, axis=1)
-    g = np.sqrt(h.max(axis=0) * float(fits.weights.min()))
+    h = np.cumsum(shapes * shapes, axis=0)
+    g = np.sqrt(h.max(axis=1) * float(fits.weights.min()))
     return g if fits.intercept else np.concatenate(([0.0], g))
 
 

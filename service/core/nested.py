@@ -58,6 +58,10 @@ class NestedFits:
         """Residual degrees of freedom of a degree."""
         return self.n - self.columns(degree)
 
+    def all_df(self) -> Floats:
+        """Residual degrees of freedom by degree."""
+        return np.arange(self.df(0), self.df(self.top) - 1, -1.0)
+
     def basis_at(self, x: Floats) -> Floats:
         """The unscaled basis at x: shape (len(x), p)."""
         return basis(x, self.domain, self.top, self.intercept)
@@ -67,12 +71,12 @@ class NestedFits:
         return np.asarray(self.basis_at(x) @ self.r_inverse)
 
     def orthonormal_on_grid(self) -> Floats:
-        """The same on GRID even points over the data's range: (GRID, p)."""
+        """The same on GRID even points over the data's range, one polynomial a row: (p, GRID)."""
         columns = _chebyshev_on_grid(self.top)
         if not self.intercept:
             lo, hi = self.domain
             columns = columns[: self.top] * (np.linspace(lo, hi, GRID) / max(abs(lo), abs(hi)))
-        return np.asarray(columns.T @ self.r_inverse)
+        return np.asarray(self.r_inverse.T @ columns)
 
     def up_to(self, top: int) -> "NestedFits":
         """The same fits as far as degree `top`: parts of the same arrays."""
@@ -156,6 +160,13 @@ def highest_estimable(observations: Observations, max_degree: int, intercept: bo
     return min(max_degree, nonzero, n - 1)
 
 
+def reduced_qr(a: Floats) -> tuple[Floats, Floats]:
+    """The reduced QR factorisation, straight from LAPACK: numpy's checks take as long as a small problem."""
+    factors, tau, _, _ = lapack.dgeqrf(a)
+    r = np.triu(factors[: a.shape[1]])
+    return lapack.dorgqr(factors, tau, overwrite_a=True)[0], r
+
+
 def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool = True) -> NestedFits:
     """Fit every degree 0..top, or as far as double precision can tell the columns apart.
 
@@ -165,11 +176,10 @@ def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool 
     root_w = np.sqrt(weights)
     a = basis(x, (lo, hi), top, intercept) * root_w[:, None]
     z = root_w * y
-    q, r = np.linalg.qr(a)
-    lengths = np.sqrt(np.einsum("ij,ij->j", a, a))
-    degenerate = np.flatnonzero(np.abs(np.diag(r)) <= RANK_TOLERANCE * lengths)
-    if degenerate.size:
-        p = int(degenerate[0])
+    q, r = reduced_qr(a)
+    degenerate = np.abs(np.diagonal(r)) <= RANK_TOLERANCE * np.sqrt(np.einsum("ij,ij->j", a, a))
+    if degenerate.any():
+        p = int(degenerate.argmax())
         top = p - 1 if intercept else p
         q, r = q[:, :p], r[:p, :p]
     qty = q.T @ z
@@ -182,8 +192,10 @@ def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool 
     steps[:, 0] = left
     steps[:, 1:] = (q * qty)[:, ::-1]
     residuals = np.cumsum(steps, axis=1)[:, ::-1]
-    squares = np.concatenate(([0.0], np.cumsum((qty * qty)[::-1])))[::-1]
-    rss = float(left @ left) + squares
+    squares = np.empty(p + 1)
+    squares[0] = left @ left
+    squares[1:] = (qty * qty)[::-1]
+    rss = np.cumsum(squares)[::-1]
     leverage = np.cumsum(q * q, axis=1)
     if intercept:
         residuals, rss = residuals[:, 1:], rss[1:]

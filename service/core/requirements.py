@@ -5,7 +5,7 @@ from dataclasses import asdict
 import numpy as np
 from numpy.polynomial import chebyshev
 
-from service.core.curve import to_t, value_at
+from service.core.curve import derivative, to_t, value_at
 from service.core.findings import Findings
 from service.core.observations import Floats
 from service.core.plan import BackCalculated, MaxPermissibleError
@@ -99,7 +99,7 @@ def back_calculate(found: Findings) -> Floats:
     little beyond it, a tenth of the range at most.
     """
     o, (lo, hi) = found.observations, found.full.domain
-    first = chebyshev.chebder(found.coefficients) * (2 / (hi - lo))
+    first = derivative(found.coefficients) * (2 / (hi - lo))
     x = o.x.copy()
     reach = 0.1 * (hi - lo)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):

@@ -9,7 +9,7 @@ import numpy as np
 from scipy import special, stats
 from statsmodels.stats.stattools import durbin_watson, jarque_bera
 
-from service.core.nested import NestedFits, basis
+from service.core.nested import NestedFits, basis, reduced_qr
 from service.core.observations import Floats, Integers, Observations
 from service.core.result import Statistic
 from service.core.tails import chi2_tail, f_tail
@@ -37,7 +37,7 @@ def breusch_pagan(fits: NestedFits, degree: int) -> Statistic:
     if fits.intercept and bool((fits.weights == fits.weights[0]).all()):
         q = fits.q[:, : degree + 1]
     else:
-        q = np.linalg.qr(basis(fits.x, fits.domain, degree, True))[0]
+        q = reduced_qr(basis(fits.x, fits.domain, degree, True))[0]
     squares = fits.residuals[:, degree] ** 2
     off = squares - squares.mean()
     total = float(off @ off)
@@ -124,10 +124,10 @@ def series_difference(observations: Observations, fits: NestedFits, degree: int)
 def _added_columns(fits: NestedFits, degree: int, extra: Floats, method: str) -> Statistic:
     """F-test of regressors added to the fit; they may not lie in its span."""
     q = fits.q[:, : fits.columns(degree)]
-    before = np.linalg.norm(extra, axis=0)
+    before = np.sqrt(np.einsum("ij,ij->j", extra, extra))
     extra = extra - q @ (q.T @ extra)
-    extra = extra - q @ (q.T @ extra)
-    q2, r2 = np.linalg.qr(extra)
+    extra -= q @ (q.T @ extra)
+    q2, r2 = reduced_qr(extra)
     if np.any(np.abs(np.diag(r2)) <= 1e-10 * before):
         reason = "the added terms cannot be told from the curve itself"
         return Statistic(statistic=None, df=None, p=None, method=method, reason=reason)

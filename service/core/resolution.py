@@ -14,8 +14,13 @@ def resolution(values: Floats) -> float | None:
 
     Common practice of the trade, no source. Needs three distinct readings.
     """
-    texts = {Decimal(repr(float(v))).normalize() for v in values[:MOST_POINTS]}
-    if len(texts) < 3 or any(len(t.as_tuple().digits) > MOST_DIGITS for t in texts):
+    texts: set[Decimal] = set()
+    for value in values[:MOST_POINTS].tolist():
+        text = Decimal(repr(value)).normalize()
+        if len(text.as_tuple().digits) > MOST_DIGITS:
+            return None
+        texts.add(text)
+    if len(texts) < 3:
         return None
     exponents = [int(t.as_tuple().exponent) for t in texts]
     least = min(exponents)

@@ -39,11 +39,12 @@ def pooled_mean_square(held: HeldOut) -> Floats:
 
 def _least(rule: str, values: Floats, min_degree: int) -> RuleChoice:
     usable = values[min_degree:]
-    if np.all(np.isnan(usable)):
+    known = usable[~np.isnan(usable)]
+    if known.size == 0:
         return RuleChoice(rule=rule, degree=None, reason="no degree can be judged by this rule on these data")
-    best = float(np.nanmin(usable))
-    near = np.flatnonzero(usable <= best + RELATIVE_TIE * abs(best))
-    return RuleChoice(rule=rule, degree=int(near[0]) + min_degree)
+    best = float(known.min())
+    near = usable <= best + RELATIVE_TIE * abs(best)
+    return RuleChoice(rule=rule, degree=int(near.argmax()) + min_degree)
 
 
 def _one_standard_error(held: HeldOut, min_degree: int) -> RuleChoice:

@@ -107,8 +107,7 @@ def choose_with_screen(fits: NestedFits, *, known_uncertainty: bool, screen: boo
 
 
 def _walk(fits: NestedFits, known_uncertainty: bool) -> tuple[Floats, Floats, Floats, list[Look]]:
-    df = np.array([fits.df(d) for d in range(fits.top + 1)], dtype=np.float64)
-    p = term_p_values(fits.rss, df, fits.rounding_rss, known_uncertainty=known_uncertainty)
+    p = term_p_values(fits.rss, fits.all_df(), fits.rounding_rss, known_uncertainty=known_uncertainty)
     ratios = gap_ratios(fits)
     factors = gap_factors(ratios)
     return p, factors, ratios, walk(p.tolist(), factors.tolist(), fits.n)

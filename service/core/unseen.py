@@ -45,8 +45,8 @@ def unseen_bend(
     if working_range == fits.domain:
         on_grid = fits.orthonormal_on_grid()
     else:
-        on_grid = fits.orthonormal_at(np.linspace(working_range[0], working_range[1], GRID))
-    shapes = np.abs(on_grid).max(axis=0)
+        on_grid = fits.orthonormal_at(np.linspace(working_range[0], working_range[1], GRID)).T
+    shapes = np.abs(on_grid).max(axis=1)
     for j in range(degree + 1, min(degree + TERMS, fits.top) + 1):
         column = fits.columns(j) - 1
         b, df = float(fits.qty[column]), fits.df(j)

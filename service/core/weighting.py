@@ -10,6 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import chebyshev
 
+from service.core.curve import derivative
 from service.core.nested import NestedFits, fit_all
 from service.core.observations import Floats, Observations
 from service.core.plan import Plan
@@ -136,5 +137,5 @@ def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: i
 def slope_at(fits: NestedFits, degree: int, x: Floats) -> Floats:
     """dp/dx of one fit at x."""
     lo, hi = fits.domain
-    derivative = chebyshev.chebder(fits.chebyshev(degree)) * (2.0 / (hi - lo))
-    return np.asarray(chebyshev.chebval(((x - lo) + (x - hi)) / (hi - lo), derivative))
+    slope = derivative(fits.chebyshev(degree)) * (2.0 / (hi - lo))
+    return np.asarray(chebyshev.chebval(((x - lo) + (x - hi)) / (hi - lo), slope))
