@@ -1,0 +1,16 @@
+"""One running service for each test."""
+
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+
+from service.settings import Settings
+from tests.web.service import Service, running
+
+
+@pytest.fixture
+def service(tmp_path: Path) -> Iterator[Service]:
+    """A service on an empty data directory; its worker works only when told to."""
+    with running(Settings(data_dir=tmp_path / "data")) as one:
+        yield one
