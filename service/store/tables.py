@@ -194,3 +194,81 @@ verdict_chain = Table(
     Column("head", Digest),
     CheckConstraint("id = 1", name="one_row"),
 )
+
+keys = Table(
+    "keys",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("name", Text, nullable=False, unique=True),
+    Column("role", String(16), nullable=False),
+    Column("hash", Digest, nullable=False, unique=True),  # SHA-256 of the key, which is 256 random bits
+    Column("notify_secret", Text, nullable=False),  # signs notifications of the jobs submitted with this key
+    Column("created_at", Instant, nullable=False),
+    Column("revoked_at", Instant),
+    CheckConstraint("role IN ('submit', 'read', 'admin')", name="role_known"),
+)
+
+dataset_posts = Table(  # who has posted a dataset: the same content is stored once
+    "dataset_posts",
+    metadata,
+    Column("submitted_by", Text, primary_key=True),
+    Column("dataset_id", Id, ForeignKey(datasets.c.id), primary_key=True),
+)
+
+repeats = Table(  # Idempotency-Key: what a post has made, so that the same post again makes nothing
+    "repeats",
+    metadata,
+    Column("submitted_by", Text, primary_key=True),
+    Column("key", Text, primary_key=True),
+    Column("fingerprint", Digest, nullable=False),
+    Column("made_id", Id, nullable=False),
+    Column("created_at", Instant, nullable=False),
+    Index(None, "created_at"),
+)
+
+named_plans = Table(
+    "named_plans",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("name", Text, nullable=False),
+    Column("version", Integer, nullable=False),
+    Column("plan_digest", Digest, ForeignKey(plans.c.digest), nullable=False),
+    Column("created_by", Text, nullable=False),
+    Column("created_at", Instant, nullable=False),
+    UniqueConstraint("name", "version"),
+)
+
+batches = Table(
+    "batches",
+    metadata,
+    Column("id", Id, primary_key=True),
+    Column("submitted_by", Text, nullable=False),
+    Column("plan_digest", Digest, ForeignKey(plans.c.digest), nullable=False),
+    Column("created_at", Instant, nullable=False),
+    Column("size", Integer, nullable=False),
+    Index(None, "submitted_by", "id"),
+)
+
+batch_items = Table(
+    "batch_items",
+    metadata,
+    Column("batch_id", Id, ForeignKey(batches.c.id), primary_key=True),
+    Column("position", Integer, primary_key=True, autoincrement=False),  # in the batch as posted, from 0
+    Column("job_id", Id, ForeignKey(jobs.c.id), index=True),
+    Column("error", Text),  # JSON: why this dataset was refused
+    CheckConstraint("(job_id IS NULL) <> (error IS NULL)", name="taken_or_refused"),
+)
+
+notifications = Table(
+    "notifications",
+    metadata,
+    Column("job_id", Id, ForeignKey(jobs.c.id), primary_key=True),
+    Column("url", Text, nullable=False),
+    Column("state", String(16), nullable=False),
+    Column("attempts", Integer, nullable=False),
+    Column("next_at", Instant),  # null until the job has ended
+    Column("last_at", Instant),
+    Column("last_answer", Text),
+    CheckConstraint("state IN ('waiting', 'delivered', 'given_up')", name="state_known"),
+    Index(None, "state", "next_at"),
+)
