@@ -7,7 +7,7 @@ import numpy as np
 
 from service.core.criteria import aicc, bic
 from service.core.cross_validation import HeldOut, leave_one_out_errors
-from service.core.curve import is_monotonic
+from service.core.curve import which_monotonic
 from service.core.exact import ExactFit
 from service.core.nested import NestedFits
 from service.core.observations import Floats
@@ -41,6 +41,7 @@ def describe_candidates(
     largest = np.abs(fits.residuals / np.sqrt(fits.weights)[:, None]).max(axis=0)
     presses = np.sum(loo * loo, axis=0)
     total = float(fits.weights.sum())
+    monotonic = which_monotonic(fits.all_chebyshev(), fits.domain, working_range)
     out: list[Candidate] = []
     for degree in range(plan.min_degree, plan.max_degree + 1):
         if degree > fits.top:
@@ -72,7 +73,7 @@ def describe_candidates(
                 step=_step(fits, degree, rss, float(p_values[degree]), known=plan.known_uncertainty),
                 lack_of_fit=lack_of_fit[degree],
                 max_abs_residual=float(largest[degree]),
-                monotonic=is_monotonic(fits.chebyshev(degree), fits.domain, working_range) if degree else False,
+                monotonic=monotonic[degree],
                 estimable=True,
                 reason=_criteria_reason(a, b),
             )

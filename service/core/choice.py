@@ -8,9 +8,9 @@ from service.core.cross_validation import HeldOut
 from service.core.least_bend import BELOW_ANY_LEVEL, size_under_null, term_p_values, walk_many
 from service.core.nested import NestedFits, fit_all
 from service.core.observations import Floats, Integers
-from service.core.plan import RULES, Plan
+from service.core.plan import Plan
 from service.core.result import Decision, DegreeShare, RuleChoice, Stability, Step
-from service.core.rules import other_rule, stability_by_repeat
+from service.core.rules import other_rules, stability_by_repeat
 from service.core.screen import Walked, choose_with_screen
 
 
@@ -48,8 +48,7 @@ def choose(fits: NestedFits, held: HeldOut, plan: Plan, walked: Walked | None) -
     walked = walked or choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
     least = min(plan.min_degree, fits.top)
     bend = min(max(walked.degree, least), fits.top)
-    rules: list[RuleChoice] = [RuleChoice(rule="least_bend", degree=bend)]
-    rules += [other_rule(rule, fits, held, least) for rule in RULES if rule != "least_bend"]
+    rules = [RuleChoice(rule="least_bend", degree=bend), *other_rules(fits, held, least)]
     chosen = next(r for r in rules if r.rule == plan.rule)
     degree = chosen.degree
     steps = _walk_steps(walked, bend) if plan.rule == "least_bend" else _rule_steps(chosen)

@@ -154,16 +154,32 @@ def slope_range(
 
 def is_monotonic(coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]) -> bool:
     """Strictly monotonic: the slope keeps one sign, zero excluded up to rounding."""
-    if working_range == domain:
-        # the slope lies within its Bernstein coefficients, the first and last of which are its values at the ends
-        bounds = _slope_bernstein(coefficients.size - 1) @ coefficients
-        first, last = float(bounds[0]), float(bounds[-1])
-        if _one_sign(float(bounds.min()), float(bounds.max())):
-            return True
-        if not _one_sign(min(first, last), max(first, last)):
-            return False
-    least, greatest, _ = slope_range(coefficients, domain, working_range)
-    return _one_sign(least, greatest)
+    return which_monotonic(coefficients[:, None], domain, working_range)[0]
+
+
+def which_monotonic(
+    coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]
+) -> list[bool]:
+    """`is_monotonic` for many curves, one a column of coefficients on T_0..T_top."""
+    if working_range != domain:
+        return [_one_sign(*slope_range(c, domain, working_range)[:2]) for c in coefficients.T]
+    # the slope lies within its Bernstein coefficients, the first and last of which are its values at the ends
+    bounds = _slope_bernstein(coefficients.shape[0] - 1) @ coefficients
+    out: list[bool] = []
+    for c, ends, least, greatest in zip(
+        coefficients.T,
+        bounds[[0, -1]].T.tolist(),
+        bounds.min(axis=0).tolist(),
+        bounds.max(axis=0).tolist(),
+        strict=True,
+    ):
+        if _one_sign(least, greatest):
+            out.append(True)
+        elif not _one_sign(min(ends), max(ends)):
+            out.append(False)
+        else:
+            out.append(_one_sign(*slope_range(c, domain, working_range)[:2]))
+    return out
 
 
 def _one_sign(least: float, greatest: float) -> bool:
@@ -189,12 +205,12 @@ def _slope_bernstein(degree: int) -> Floats:
 
     Lorentz, Bernstein Polynomials, 1986: row i of the map from powers of u in [0, 1] is C(i, k)/C(m, k).
     """
-    m = degree - 1
+    m = max(degree - 1, 0)
     rows = []
     for j in range(degree + 1):
         slope = chebyshev.Chebyshev.basis(j).deriv().convert(kind=Polynomial)
         inner = slope(Polynomial([-1.0, 2.0])).coef if j else np.zeros(1)
-        powers = np.zeros(degree)
+        powers = np.zeros(m + 1)
         powers[: inner.size] = inner
-        rows.append([sum(math.comb(i, k) / math.comb(m, k) * powers[k] for k in range(i + 1)) for i in range(degree)])
+        rows.append([sum(math.comb(i, k) / math.comb(m, k) * powers[k] for k in range(i + 1)) for i in range(m + 1)])
     return np.array(rows).T

@@ -46,12 +46,15 @@ def term_p_values(
     """
     gain = np.maximum(rss[..., :-1] - rss[..., 1:], 0.0)
     exact = rss <= rounding_rss
-    df = np.broadcast_to(df, rss.shape)[..., 1:]
+    df = df[..., 1:]
     out = np.ones(rss.shape)
     p = out[..., 1:]
     f = gain if known_uncertainty else gain * df / np.where(exact[..., 1:], 1.0, rss[..., 1:])
     worth = f >= least_f
-    p[worth] = z_two_sided(np.sqrt(f[worth])) if known_uncertainty else f_tail(f[worth], 1, df[worth])
+    if known_uncertainty:
+        p[worth] = z_two_sided(np.sqrt(f[worth]))
+    else:
+        p[worth] = f_tail(f[worth], 1, np.broadcast_to(df, f.shape)[worth] if df.ndim < f.ndim else df[worth])
     if not known_uncertainty:
         p[exact[..., 1:]] = 0.0
     p[exact[..., :-1]] = 1.0

@@ -103,6 +103,15 @@ class NestedFits:
         b = self.r_inverse[:c, :c] @ self.qty[:c]
         return b if self.intercept else to_chebyshev(self.domain, c) @ b
 
+    def all_chebyshev(self) -> Floats:
+        """Coefficients of every degree on T_0..T_top, one degree a column: (top+1, top+1)."""
+        b = np.cumsum(self.r_inverse * self.qty, axis=1)
+        if self.intercept:
+            return np.asarray(b)
+        out = np.zeros((self.top + 1, self.top + 1))
+        out[:, 1:] = to_chebyshev(self.domain, self.top) @ b
+        return out
+
     def unscaled_covariance(self, degree: int) -> Floats:
         """Covariance of `chebyshev(degree)` for unit residual variance: (degree+1, degree+1)."""
         c = self.columns(degree)
@@ -160,10 +169,15 @@ def highest_estimable(observations: Observations, max_degree: int, intercept: bo
     return min(max_degree, nonzero, n - 1)
 
 
+@lru_cache(maxsize=32)
+def _upper(size: int) -> Floats:
+    return np.triu(np.ones((size, size)))
+
+
 def reduced_qr(a: Floats) -> tuple[Floats, Floats]:
     """The reduced QR factorisation, straight from LAPACK: numpy's checks take as long as a small problem."""
     factors, tau, _, _ = lapack.dgeqrf(a)
-    r = np.triu(factors[: a.shape[1]])
+    r = factors[: a.shape[1]] * _upper(a.shape[1])
     return lapack.dorgqr(factors, tau, overwrite_a=True)[0], r
 
 

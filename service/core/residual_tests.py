@@ -7,7 +7,7 @@ import inspect
 
 import numpy as np
 from scipy import special, stats
-from statsmodels.stats.stattools import durbin_watson, jarque_bera
+from statsmodels.stats.stattools import jarque_bera
 
 from service.core.nested import NestedFits, basis, reduced_qr
 from service.core.observations import Floats, Integers, Observations
@@ -64,15 +64,16 @@ def serial_correlation(fits: NestedFits, degree: int, order: Integers | None) ->
     q, e = fits.q[:, : fits.columns(degree)], fits.residuals[:, degree]
     if order is not None:
         q, e = q[order], e[order]
-    d = float(durbin_watson(e))
+    changes = e[1:] - e[:-1]
+    d = float(changes @ changes) / float(e @ e)
     n = fits.n
-    steps = np.diff(q, axis=0)
+    steps = q[1:] - q[:-1]
     b = steps.T @ steps  # Q'AQ, with A = D'D of first differences
     aq = np.zeros_like(q)
     aq[:-1] -= steps
     aq[1:] += steps
-    trace = 2.0 * (n - 1) - float(np.trace(b))
-    squares = 6.0 * n - 8 - 2 * float(np.sum(aq * aq)) + float(np.sum(b * b))
+    trace = 2.0 * (n - 1) - float(b.trace())
+    squares = 6.0 * n - 8 - 2 * float(np.vdot(aq, aq)) + float(np.vdot(b, b))
     mean = trace / df
     variance = 2 * (squares - trace * mean) / (df * (df + 2))
     if variance <= 0:
@@ -100,7 +101,8 @@ def reset(fits: NestedFits, degree: int) -> Statistic:
     if spread == 0:
         return Statistic(statistic=None, df=None, p=None, method=method, reason="constant fitted values")
     f = (fitted - fitted.mean()) / spread
-    extra = np.column_stack((f**2, f**3)) * root_w[:, None]
+    squared = f * f
+    extra = np.stack((squared * root_w, squared * f * root_w), axis=1)
     return _added_columns(fits, degree, extra, method)
 
 
@@ -128,7 +130,7 @@ def _added_columns(fits: NestedFits, degree: int, extra: Floats, method: str) ->
     extra = extra - q @ (q.T @ extra)
     extra -= q @ (q.T @ extra)
     q2, r2 = reduced_qr(extra)
-    if np.any(np.abs(np.diag(r2)) <= 1e-10 * before):
+    if (np.abs(np.diagonal(r2)) <= 1e-10 * before).any():
         reason = "the added terms cannot be told from the curve itself"
         return Statistic(statistic=None, df=None, p=None, method=method, reason=reason)
     m = extra.shape[1]

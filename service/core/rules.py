@@ -6,24 +6,26 @@ from service.core.criteria import aicc, bic
 from service.core.cross_validation import HeldOut
 from service.core.nested import NestedFits
 from service.core.observations import Floats, Integers
-from service.core.plan import Rule
+from service.core.plan import RULES, Rule
 from service.core.result import RuleChoice
 
+NOT_JUDGED = "no degree can be judged by this rule on these data"
 RELATIVE_TIE = 1e-12  # values closer than this are equal: the lower degree is taken
 
 
-def other_rule(rule: Rule, fits: NestedFits, held: HeldOut, min_degree: int) -> RuleChoice:
-    """What `rule` (any but `least_bend`) chooses among degrees min_degree..top."""
+def other_rules(fits: NestedFits, held: HeldOut, min_degree: int) -> list[RuleChoice]:
+    """What every rule but `least_bend` chooses among degrees min_degree..top."""
     exact = exact_degree(fits, min_degree)
     if exact is not None:
-        return RuleChoice(
-            rule=rule, degree=exact, reason="the least degree whose residuals are at the level of rounding"
-        )
-    if rule in ("aicc", "bic"):
-        return _least(rule, (aicc if rule == "aicc" else bic)(fits), min_degree)
-    if rule == "lowest_cv":
-        return _least(rule, pooled_mean_square(held), min_degree)
-    return _one_standard_error(held, min_degree)
+        reason = "the least degree whose residuals are at the level of rounding"
+        return [RuleChoice(rule=rule, degree=exact, reason=reason) for rule in RULES if rule != "least_bend"]
+    lowest = _least("lowest_cv", pooled_mean_square(held), min_degree)
+    return [
+        lowest,
+        _one_standard_error(held, min_degree, lowest.degree),
+        _least("aicc", aicc(fits), min_degree),
+        _least("bic", bic(fits), min_degree),
+    ]
 
 
 def exact_degree(fits: NestedFits, min_degree: int) -> int | None:
@@ -41,27 +43,26 @@ def _least(rule: str, values: Floats, min_degree: int) -> RuleChoice:
     usable = values[min_degree:]
     known = usable[~np.isnan(usable)]
     if known.size == 0:
-        return RuleChoice(rule=rule, degree=None, reason="no degree can be judged by this rule on these data")
+        return RuleChoice(rule=rule, degree=None, reason=NOT_JUDGED)
     best = float(known.min())
     near = usable <= best + RELATIVE_TIE * abs(best)
     return RuleChoice(rule=rule, degree=int(near.argmax()) + min_degree)
 
 
-def _one_standard_error(held: HeldOut, min_degree: int) -> RuleChoice:
+def _one_standard_error(held: HeldOut, min_degree: int, lowest: int | None) -> RuleChoice:
     """The least degree within one standard error of the lowest cross-validated mean square error.
 
     Breiman, Friedman, Olshen & Stone 1984, 3.4.3; the standard error is that of the fold means within
     a repeat, averaged over repeats.
     """
     rule = "one_standard_error"
+    if lowest is None:
+        return RuleChoice(rule=rule, degree=None, reason=NOT_JUDGED)
     pooled = pooled_mean_square(held)
-    lowest = _least(rule, pooled, min_degree)
-    if lowest.degree is None:
-        return lowest
-    error = _standard_error(held.sse[:, lowest.degree] / held.weight, held.repeat_of)
+    error = _standard_error(held.sse[:, lowest] / held.weight, held.repeat_of)
     if error is None:
         return RuleChoice(rule=rule, degree=None, reason="one fold has no standard error")
-    limit = pooled[lowest.degree] + error
+    limit = pooled[lowest] + error
     within = np.flatnonzero(pooled[min_degree:] <= limit)
     return RuleChoice(rule=rule, degree=int(within[0]) + min_degree)
 
@@ -90,10 +91,9 @@ def stability_by_repeat(rule: Rule, held: HeldOut, min_degree: int) -> list[int]
             repeat_of=np.zeros(int(rows.sum()), dtype=np.intp),
             estimable=held.estimable[rows],
         )
-        if rule == "lowest_cv":
-            pick = _least(rule, pooled_mean_square(part), min_degree).degree
-        else:
-            pick = _one_standard_error(part, min_degree).degree
+        pick = _least("lowest_cv", pooled_mean_square(part), min_degree).degree
+        if rule == "one_standard_error":
+            pick = _one_standard_error(part, min_degree, pick).degree
         if pick is not None:
             picks.append(pick)
     return picks

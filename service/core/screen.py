@@ -47,23 +47,25 @@ class Walked:
 
 
 def studentised(fits: NestedFits, degree: int, *, known_uncertainty: bool = False) -> Floats:
-    """Externally studentised residuals (Cook & Weisberg 1982, 2.2.1); NaN where undefined.
+    """Externally studentised residuals (Cook & Weisberg 1982, 2.2.1): (n,), NaN where undefined.
 
     With known uncertainty: residual over its known standard deviation.
     """
-    h = fits.leverage[:, degree]
-    e = fits.residuals[:, degree]
-    df = fits.df(degree) - 1
-    with np.errstate(divide="ignore", invalid="ignore"):
-        spare = np.where(h < 1 - 1e-10, 1 - h, np.nan)
-        if known_uncertainty:
-            return np.asarray(e / np.sqrt(spare))
-        if df < 1 or fits.rss[degree] <= fits.rounding_rss:
-            return np.full(e.shape, np.nan)
-        left = fits.rss[degree] - e * e / spare
-        # a point that alone spoils an otherwise exact fit: keep its residual large but finite
-        left = np.maximum(left, fits.rounding_rss + 1e-14 * fits.rss[degree])
-        return np.asarray(e / np.sqrt(spare * left / df))
+    return np.asarray(_studentised(fits, slice(degree, degree + 1), known_uncertainty)[:, 0])
+
+
+def _studentised(fits: NestedFits, degrees: slice, known_uncertainty: bool) -> Floats:
+    """By degree, one a column."""
+    e = fits.residuals[:, degrees]
+    spare = 1 - fits.leverage[:, degrees]
+    spare[spare < 1e-10] = np.nan
+    if known_uncertainty:
+        return np.asarray(e / np.sqrt(spare))
+    rss, df = fits.rss[degrees], fits.all_df()[degrees] - 1
+    # a point that alone spoils an otherwise exact fit: keep its residual large but finite
+    left = np.maximum(rss - e * e / spare, fits.rounding_rss + 1e-14 * rss)
+    t = e / np.sqrt(spare * left / np.where((df < 1) | (rss <= fits.rounding_rss), np.nan, df))
+    return np.asarray(t)
 
 
 def farthest(values: Floats) -> int | None:
@@ -114,15 +116,17 @@ def _walk(fits: NestedFits, known_uncertainty: bool) -> tuple[Floats, Floats, Fl
 
 
 def _wildest(fits: NestedFits, chosen: int, known_uncertainty: bool) -> tuple[int, int, float, float] | None:
+    first = chosen if fits.intercept else max(chosen, 1)
+    degrees = slice(first, chosen + 2)
+    t = _studentised(fits, degrees, known_uncertainty)
+    t[fits.leverage[:, degrees] >= MOST_LEVERAGE] = np.nan
     best: tuple[int, int, float, float] | None = None
-    for degree in (chosen, chosen + 1):
-        if degree > fits.top or (not fits.intercept and degree == 0):
-            continue
-        t = studentised(fits, degree, known_uncertainty=known_uncertainty)
-        place = farthest(np.where(fits.leverage[:, degree] < MOST_LEVERAGE, t, np.nan))
+    for column in range(t.shape[1]):
+        place = farthest(t[:, column])
         if place is None:
             continue
-        p = outlier_p(float(t[place]), fits, degree, known_uncertainty=known_uncertainty)
+        value, degree = float(t[place, column]), first + column
+        p = outlier_p(value, fits, degree, known_uncertainty=known_uncertainty)
         if p < BONFERRONI and (best is None or p < best[3]):
-            best = (place, degree, float(t[place]), p)
+            best = (place, degree, value, p)
     return best
