@@ -37,9 +37,11 @@ class BendLimit:
 def bend_limits(found: Findings) -> list[BendLimit]:
     """What the plan says about bend: the maximum permissible error, and `max_unseen_bend`."""
     asked = found.plan.requirements
+    mpe = asked.max_permissible_error
+    if mpe is None and asked.max_unseen_bend is None:
+        return []
     grid = np.linspace(found.working_range[0], found.working_range[1], GRID)
     limits: list[BendLimit] = []
-    mpe = asked.max_permissible_error
     if mpe is not None and (mpe.of == "y" or found.monotonic):
         pointwise = mpe.kind == "percent_of_value"
         x = found.observations.level_x if pointwise else grid

@@ -115,10 +115,9 @@ def walk_many(p: Floats, factors: Floats, n: Floats) -> Integers:
     a = np.minimum(0.06, 0.2 / np.sqrt(n))
     # jump[d]: where a walk at d goes next; d itself where it stops
     jump = np.tile(np.arange(size), (m, 1))
-    for d in range(size - 1):
-        for k in range(min(len(SHARES), size - 1 - d), 0, -1):
-            hit = p[:, d + k] <= a * (SHARES[k - 1] * factors[d + k])
-            jump[hit, d] = d + k
+    for k in range(min(len(SHARES), size - 1), 0, -1):  # the nearest term wins, so it is looked at last
+        hit = p[:, k:] <= a[:, None] * (SHARES[k - 1] * factors[k:])
+        jump[:, :-k][hit] = np.broadcast_to(np.arange(k, size), hit.shape)[hit]
     at = np.zeros(m, dtype=np.intp)
     rows = np.arange(m)
     for _ in range(size - 1):

@@ -181,56 +181,90 @@ def reduced_qr(a: Floats) -> tuple[Floats, Floats]:
     return lapack.dorgqr(factors, tau, overwrite_a=True)[0], r
 
 
-def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool = True) -> NestedFits:
-    """Fit every degree 0..top, or as far as double precision can tell the columns apart.
+@dataclass(frozen=True, kw_only=True, eq=False, slots=True)
+class Design:
+    """What fits of one dataset under different weights share. columns: (p, n), the basis at the points.
 
-    x, y, weights: shape (n,), weights > 0 (1/variance up to a factor); top < number of distinct x.
+    rounding: what rounding of x and y alone can do to one residual.
     """
-    lo, hi = float(x.min()), float(x.max())
-    root_w = np.sqrt(weights)
-    a = basis(x, (lo, hi), top, intercept) * root_w[:, None]
-    z = root_w * y
-    q, r = reduced_qr(a)
-    degenerate = np.abs(np.diagonal(r)) <= RANK_TOLERANCE * np.sqrt(np.einsum("ij,ij->j", a, a))
-    if degenerate.any():
-        p = int(degenerate.argmax())
-        top = p - 1 if intercept else p
-        q, r = q[:, :p], r[:p, :p]
-    qty = q.T @ z
-    left = z - q @ qty
-    again = q.T @ left  # one more projection takes out what rounding left of the fit
-    qty = qty + again
-    left -= q @ again
-    p = qty.size
-    steps = np.empty((z.size, p + 1))
-    steps[:, 0] = left
-    steps[:, 1:] = (q * qty)[:, ::-1]
-    residuals = np.cumsum(steps, axis=1)[:, ::-1]
-    squares = np.empty(p + 1)
-    squares[0] = left @ left
-    squares[1:] = (qty * qty)[::-1]
-    rss = np.cumsum(squares)[::-1]
-    leverage = np.cumsum(q * q, axis=1)
-    if intercept:
-        residuals, rss = residuals[:, 1:], rss[1:]
-    else:
-        leverage = np.concatenate((np.zeros((z.size, 1)), leverage), axis=1)
-    spread = float(y.max() - y.min()) / (hi - lo) * float(np.abs(x).max())
-    rounding = 4 * EPS * (float(np.abs(y).max()) + spread)
-    return NestedFits(
-        x=x,
-        y=y,
-        weights=weights,
-        domain=(lo, hi),
-        intercept=intercept,
-        top=top,
-        q=q,
-        r=r,
-        r_inverse=lapack.dtrtri(r)[0],
-        qty=qty,
-        residuals=residuals,
-        leverage=leverage,
-        rss=rss,
-        tss=float(rss[0]),
-        rounding_rss=float(weights.sum()) * rounding * rounding,
-    )
+
+    x: Floats
+    y: Floats
+    domain: tuple[float, float]
+    intercept: bool
+    top: int
+    columns: Floats
+    rounding: float
+
+    @classmethod
+    def of(cls, x: Floats, y: Floats, *, top: int, intercept: bool = True) -> "Design":
+        """For degrees 0..top; x, y of shape (n,), top < number of distinct x."""
+        lo, hi = float(x.min()), float(x.max())
+        low, high = float(y.min()), float(y.max())
+        spread = (high - low) / (hi - lo) * max(abs(lo), abs(hi))
+        return cls(
+            x=x,
+            y=y,
+            domain=(lo, hi),
+            intercept=intercept,
+            top=top,
+            columns=basis(x, (lo, hi), top, intercept).T,
+            rounding=4 * EPS * (max(abs(low), abs(high)) + spread),
+        )
+
+    def fit(self, weights: Floats) -> NestedFits:
+        """Fit every degree 0..top, or as far as double precision can tell the columns apart.
+
+        weights: (n,), positive, 1/variance up to a factor.
+        """
+        root_w = np.sqrt(weights)
+        a = (self.columns * root_w).T
+        z = root_w * self.y
+        q, r = reduced_qr(a)
+        top = self.top
+        degenerate = np.abs(np.diagonal(r)) <= RANK_TOLERANCE * np.sqrt(np.einsum("ij,ij->j", a, a))
+        if degenerate.any():
+            p = int(degenerate.argmax())
+            top = p - 1 if self.intercept else p
+            q, r = q[:, :p], r[:p, :p]
+        qty = q.T @ z
+        left = z - q @ qty
+        again = q.T @ left  # one more projection takes out what rounding left of the fit
+        qty = qty + again
+        left -= q @ again
+        p = qty.size
+        steps = np.empty((z.size, p + 1))
+        steps[:, 0] = left
+        steps[:, 1:] = (q * qty)[:, ::-1]
+        residuals = np.cumsum(steps, axis=1)[:, ::-1]
+        squares = np.empty(p + 1)
+        squares[0] = left @ left
+        squares[1:] = (qty * qty)[::-1]
+        rss = np.cumsum(squares)[::-1]
+        leverage = np.cumsum(q * q, axis=1)
+        if self.intercept:
+            residuals, rss = residuals[:, 1:], rss[1:]
+        else:
+            leverage = np.concatenate((np.zeros((z.size, 1)), leverage), axis=1)
+        return NestedFits(
+            x=self.x,
+            y=self.y,
+            weights=weights,
+            domain=self.domain,
+            intercept=self.intercept,
+            top=top,
+            q=q,
+            r=r,
+            r_inverse=lapack.dtrtri(r)[0],
+            qty=qty,
+            residuals=residuals,
+            leverage=leverage,
+            rss=rss,
+            tss=float(rss[0]),
+            rounding_rss=float(weights.sum()) * self.rounding**2,
+        )
+
+
+def fit_all(x: Floats, y: Floats, weights: Floats, *, top: int, intercept: bool = True) -> NestedFits:
+    """`Design.fit` where one weighting is all that is needed."""
+    return Design.of(x, y, top=top, intercept=intercept).fit(weights)

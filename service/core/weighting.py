@@ -11,7 +11,7 @@ import numpy as np
 from numpy.polynomial import chebyshev
 
 from service.core.curve import derivative
-from service.core.nested import NestedFits, fit_all
+from service.core.nested import Design, NestedFits
 from service.core.observations import Floats, Observations
 from service.core.plan import Plan
 from service.core.result import WeightChoice, WeightModel
@@ -48,7 +48,7 @@ def weigh(observations: Observations, plan: Plan, *, top: int, reach: int) -> We
     if asked == "auto":
         return _compare(observations, plan, top, reach)
     x, y = observations.x, observations.y
-    full = fit_all(x, y, power_weights(x, asked), top=reach, intercept=plan.intercept)
+    full = Design.of(x, y, top=reach, intercept=plan.intercept).fit(power_weights(x, asked))
     choice = WeightChoice(asked=asked, used=asked, common_degree=None, compared=(), why="as the plan asks")
     return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=False)
 
@@ -76,7 +76,8 @@ def restricted_log_likelihood(fits: NestedFits, degree: int) -> float:
 def _compare(observations: Observations, plan: Plan, top: int, reach: int) -> Weighted:
     x, y = observations.x, observations.y
     size = np.abs(x)
-    full = fit_all(x, y, np.ones_like(x), top=reach, intercept=plan.intercept)
+    design = Design.of(x, y, top=reach, intercept=plan.intercept)
+    full = design.fit(np.ones_like(x))
     equal = full.up_to(top)
     why = ""
     if size.min() == 0:
@@ -89,7 +90,7 @@ def _compare(observations: Observations, plan: Plan, top: int, reach: int) -> We
         choice = WeightChoice(asked="auto", used="equal", common_degree=None, compared=(), why=why)
         return Weighted(full=full, fits=equal, choice=choice, walked=None, absolute=False)
     names = ("equal", "1/x", "1/x^2")
-    fulls = [full] + [fit_all(x, y, power_weights(x, name), top=reach, intercept=plan.intercept) for name in names[1:]]
+    fulls = [full, *(design.fit(power_weights(x, name)) for name in names[1:])]
     all_fits = [f.up_to(top) for f in fulls]
     walks = [choose_with_screen(fits, known_uncertainty=False) for fits in all_fits]
     least = 0 if plan.intercept else 1
@@ -116,7 +117,8 @@ def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: i
     assert observations.u_y is not None
     x, y = observations.x, observations.y
     variance = observations.u_y**2
-    full = fit_all(x, y, 1.0 / variance, top=reach, intercept=plan.intercept)
+    design = Design.of(x, y, top=reach, intercept=plan.intercept)
+    full = design.fit(1.0 / variance)
     used, why = "u_y", "1/u_y^2, from the uncertainties given"
     if observations.u_x is not None:
         used, why = "u_y and u_x", "1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given"
@@ -127,7 +129,7 @@ def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: i
             slope = slope_at(fits, degree, x)
             new = 1.0 / (variance + (slope * observations.u_x) ** 2)
             change = float(np.max(np.abs(new / fits.weights - 1)))
-            full = fit_all(x, y, new, top=reach, intercept=plan.intercept)
+            full = design.fit(new)
             if change < 1e-10:
                 break
     choice = WeightChoice(asked=plan.weights, used=used, common_degree=None, compared=(), why=why)

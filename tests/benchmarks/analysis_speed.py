@@ -76,16 +76,17 @@ def exact_cross_validation(x: Floats, y: Floats) -> None:
     cross_validate(fit_all(x, y, np.ones_like(x), top=TOP), make_folds(observations, Plan().resampling))
 
 
-def medians(calls: dict[str, Callable[[], object]], rounds: int) -> dict[str, float]:
-    """Median seconds of each call, all called once in each round."""
+def medians(calls: dict[str, Callable[[], object]], rounds: int, repeats: int = 5) -> dict[str, float]:
+    """Median seconds of each call, each called `repeats` times in a row in each round."""
     for call in calls.values():
         call()
     taken: dict[str, list[float]] = {name: [] for name in calls}
     for _ in range(rounds):
         for name, call in calls.items():
-            start = time.perf_counter()
-            call()
-            taken[name].append(time.perf_counter() - start)
+            for _ in range(repeats):
+                start = time.perf_counter()
+                call()
+                taken[name].append(time.perf_counter() - start)
     return {name: float(np.median(values)) for name, values in taken.items()}
 
 
