@@ -42,16 +42,21 @@ class Desk:
     database: Database
     transport: Transport
     settings: Settings
+    start: datetime = START
 
     def put(self, seed: int = 0, *, by: str = "anna", priority: int = 0, seconds: float = 0, **more: Any) -> str:
         """Id of a new job."""
         plan = more.pop("plan", Plan())
         asked = Submission(submitted_by=by, plan=plan, dataset=calibration(seed, **more), priority=priority)
-        return submit_job(self.database, self.transport, self.settings, asked, now=at(seconds))
+        return submit_job(
+            self.database, self.transport, self.settings, asked, now=self.start + timedelta(seconds=seconds)
+        )
 
     def take(self, worker: str = "w1", *, seconds: float = 0, stalest: bool = False) -> Claim | None:
         """Claim the next job."""
-        return take_job(self.database, self.settings, worker=worker, now=at(seconds), stalest=stalest)
+        return take_job(
+            self.database, self.settings, worker=worker, now=self.start + timedelta(seconds=seconds), stalest=stalest
+        )
 
     def took(self, worker: str = "w1", *, seconds: float = 0) -> Claim:
         """Claim the next job, of which there must be one."""

@@ -18,7 +18,22 @@ from service.errors import Overloaded, Unusable
 from service.settings import Settings
 
 BUSY_SECONDS = 30
-CONNECT_SECONDS = 5
+# Either side notices within some ten seconds that the other was cut off, and a client that stopped in the middle of a
+# transaction does not keep its locks: the end of the chain of verdicts is one of them.
+CLIENT_OPTIONS = {
+    "connect_timeout": 5,
+    "tcp_user_timeout": 10_000,
+    "keepalives_idle": 5,
+    "keepalives_interval": 2,
+    "keepalives_count": 3,
+}
+SERVER_OPTIONS = {
+    "tcp_keepalives_idle": "5",
+    "tcp_keepalives_interval": "2",
+    "tcp_keepalives_count": "3",
+    "tcp_user_timeout": "10000",
+    "idle_in_transaction_session_timeout": "15000",
+}
 READERS = 8
 FILE_NAME = "leastbend.db"
 PASSING_FAILURES = (
@@ -90,8 +105,9 @@ def postgres_options(url: str, *, durable: bool) -> dict[str, Any]:
     """Parameters of a connection besides those of the URL, whose own `options` are kept."""
     asked = make_url(url).query.get("options", "")
     given = asked if isinstance(asked, str) else " ".join(asked)
-    options = given if durable else f"{given} -c synchronous_commit=off"
-    return {"connect_timeout": CONNECT_SECONDS, "options": options.strip()}
+    server = SERVER_OPTIONS if durable else {**SERVER_OPTIONS, "synchronous_commit": "off"}
+    options = " ".join(f"-c {name}={value}" for name, value in server.items())
+    return {**CLIENT_OPTIONS, "options": f"{options} {given}".strip()}
 
 
 def prepare_directory(directory: Path) -> Path:

@@ -4,14 +4,14 @@ import json
 from typing import Any, cast
 
 import numpy as np
-from sqlalchemy import Connection, RowMapping, select
+from sqlalchemy import Connection, RowMapping, Select, select
 from sqlalchemy.dialects.postgresql import insert
 
 from service.core.observations import Floats, Observations
 from service.store.clock import new_id
 from service.store.codec import canonical
 from service.store.records import DatasetContent, DatasetRecord, Page
-from service.store.tables import datasets
+from service.store.tables import dataset_posts, datasets
 
 LITTLE_ENDIAN = "<f8"
 HEAD = (
@@ -78,9 +78,16 @@ def store(
     return connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar_one(), False
 
 
-def find(connection: Connection, dataset_id: str) -> DatasetRecord | None:
-    """One dataset without its points."""
-    row = connection.execute(select(*HEAD).where(datasets.c.id == dataset_id)).mappings().first()
+def posted(connection: Connection, dataset_id: str, submitted_by: str) -> None:
+    """Remember that this submitter has posted it."""
+    row = {"dataset_id": dataset_id, "submitted_by": submitted_by}
+    connection.execute(insert(dataset_posts).on_conflict_do_nothing(), row)
+
+
+def find(connection: Connection, dataset_id: str, *, posted_by: str | None = None) -> DatasetRecord | None:
+    """One dataset without its points; with `posted_by`, only if that submitter has posted it."""
+    query = _posted_by(select(*HEAD).where(datasets.c.id == dataset_id), posted_by)
+    row = connection.execute(query).mappings().first()
     return None if row is None else _record(row)
 
 
@@ -101,15 +108,25 @@ def load(connection: Connection, dataset_id: str) -> tuple[DatasetContent, str] 
     return content, row["digest"]
 
 
-def newest(connection: Connection, *, subject: str | None, before: str | None, limit: int) -> Page[DatasetRecord]:
-    """Datasets, newest first."""
-    query = select(*HEAD).order_by(datasets.c.id.desc()).limit(limit + 1)
+def newest(
+    connection: Connection, *, subject: str | None, posted_by: str | None, before: str | None, limit: int
+) -> Page[DatasetRecord]:
+    """Datasets, newest first; with `posted_by`, only what that submitter has posted."""
+    query = _posted_by(select(*HEAD), posted_by).order_by(datasets.c.id.desc()).limit(limit + 1)
     if subject is not None:
         query = query.where(datasets.c.subject == subject)
     if before is not None:
         query = query.where(datasets.c.id < before)
     rows = [_record(row) for row in connection.execute(query).mappings()]
     return Page(items=tuple(rows[:limit]), after=rows[limit - 1].id if len(rows) > limit else None)
+
+
+def _posted_by(query: Select[Any], submitter: str | None) -> Select[Any]:
+    if submitter is None:
+        return query
+    return query.join(dataset_posts, dataset_posts.c.dataset_id == datasets.c.id).where(
+        dataset_posts.c.submitted_by == submitter
+    )
 
 
 def _record(row: RowMapping) -> DatasetRecord:

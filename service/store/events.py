@@ -6,6 +6,7 @@ from typing import Any
 
 from sqlalchemy import Connection, insert, select
 
+from service.store.records import EventRecord
 from service.store.tables import job_events
 
 
@@ -18,3 +19,12 @@ def of_job(connection: Connection, job_id: str) -> list[tuple[str, datetime, dic
     """Kind, time and detail of every event of one job, oldest first."""
     query = select(job_events).where(job_events.c.job_id == job_id).order_by(job_events.c.id)
     return [(row.kind, row.at, json.loads(row.detail)) for row in connection.execute(query)]
+
+
+def since(connection: Connection, job_id: str, after: int) -> list[EventRecord]:
+    """Events of one job behind the one with id `after`, oldest first."""
+    query = select(job_events).where(job_events.c.job_id == job_id, job_events.c.id > after).order_by(job_events.c.id)
+    return [
+        EventRecord(id=row.id, kind=row.kind, at=row.at, detail=json.loads(row.detail))
+        for row in connection.execute(query)
+    ]

@@ -110,11 +110,45 @@ class Held:
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
-class VerdictRecord:
-    """An issued verdict: its canonical document and the digest of that."""
+class EventRecord:
+    """Something that happened to a job; ids grow with time."""
 
+    id: int
+    kind: str
+    at: datetime
+    detail: dict[str, Any]
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class NotificationRecord:
+    """Whom to tell of a job's end, and how far that has come."""
+
+    url: str
+    state: str
+    attempts: int
+    next_at: datetime | None
+    last_at: datetime | None
+    last_answer: str | None
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class VerdictRecord:
+    """An issued verdict: its canonical document, the digest of that, and its place in the chain."""
+
+    sequence: int
     digest: str
     document: str
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class VerdictFilter:
+    """Which verdicts; None asks nothing. `newest_only`: only the newest of each subject."""
+
+    subject: str | None = None
+    verdict: str | None = None
+    since: datetime | None = None
+    submitted_by: str | None = None
+    newest_only: bool = False
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

@@ -15,7 +15,7 @@ from service.store.database import Database, open_database
 from service.store.transport import QueueAway, Transport
 from service.worker.desk import Desk
 from service.worker.heartbeat import Heartbeat
-from service.worker.process import die_with, is_gone, worker_name
+from service.worker.process import die_with, end, is_gone, worker_name
 from service.workflows.provenance import this_machine
 from service.workflows.sweep import sweep
 
@@ -86,7 +86,9 @@ class Sweeper(Scheduler):  # type: ignore[misc]
         """One sweep."""
         if self._database is not None:
             try:
-                swept = sweep(self._database, self._transport, self._settings, now=now or utc_now(), is_gone=is_gone)
+                swept = sweep(
+                    self._database, self._transport, self._settings, now=now or utc_now(), is_gone=is_gone, end=end
+                )
                 if swept.requeued or swept.timed_out or swept.given_up:
                     logger.warning("%s", swept)
             except (LeastbendError, SQLAlchemyError) as error:

@@ -19,6 +19,8 @@ from service.worker.heartbeat import Heartbeat
 from service.workflows.provenance import Machine
 from service.workflows.run import hand_back, retry_job, run_job, take_job
 
+PATIENCE_SECONDS = 30.0  # a result is worth waiting so long for a database that restarts
+
 logger = logging.getLogger(__name__)
 
 
@@ -67,7 +69,14 @@ class Desk:
         # Not a signal: this also stops a process that is inside C code. The sweep then marks the job timed out.
         faulthandler.dump_traceback_later(self._settings.job_seconds, exit=True, file=sys.__stderr__ or 2)
         try:
-            run_job(self._database, claim, self._machine, clock=self._clock, progress=self._heartbeat.say)
+            run_job(
+                self._database,
+                claim,
+                self._machine,
+                clock=self._clock,
+                progress=self._heartbeat.say,
+                patience=PATIENCE_SECONDS,
+            )
         except leases.Stale:
             logger.warning("job %s was cancelled or given to another worker; its outcome is dropped", claim.job_id)
         except KeyboardInterrupt:

@@ -1,5 +1,6 @@
 """Processes: what a worker is called, whether one is surely gone, and dying with the parent."""
 
+import contextlib
 import ctypes
 import functools
 import hashlib
@@ -29,6 +30,14 @@ def is_gone(worker: str) -> bool:
     if tag != host_tag() or started == "-":
         return False
     return _started(number) != started
+
+
+def end(worker: str) -> None:
+    """Kill the worker of this name, if it is a process of this host that still lives."""
+    _, tag, pid, _ = worker.rsplit("/", 3) if worker.count("/") >= 3 else ("", "", "", "")
+    if tag == host_tag() and not is_gone(worker):
+        with contextlib.suppress(OSError):
+            os.kill(int(pid), signal.SIGKILL)
 
 
 @functools.lru_cache(maxsize=1)

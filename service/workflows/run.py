@@ -5,6 +5,7 @@ a job that is whole: still held, until its lease runs out and the sweep lets it 
 """
 
 import json
+import time
 from collections.abc import Callable
 from datetime import datetime, timedelta
 from functools import lru_cache
@@ -14,7 +15,7 @@ from service.core.analysis import Progress, analyse
 from service.core.observations import Observations, observe
 from service.core.plan import Plan
 from service.core.result import Result
-from service.errors import InvalidInput, LeastbendError
+from service.errors import InvalidInput, LeastbendError, Overloaded
 from service.settings import Settings
 from service.store import datasets, events, leases, plans, verdicts
 from service.store.clock import rfc3339
@@ -24,6 +25,7 @@ from service.store.records import Claim
 from service.workflows.provenance import Machine, provenance, service_version
 
 LONGEST_PAUSE = timedelta(minutes=5)
+RECORD_AGAIN = 0.5  # s
 
 parsed_plan = lru_cache(maxsize=64)(read_plan)  # of a document: jobs of one laboratory share a few
 
@@ -47,15 +49,22 @@ def run_job(
     *,
     clock: Callable[[], datetime],
     progress: Progress | None = None,
+    patience: float = 0.0,
 ) -> None:
-    """Compute and record. What the core refuses fails the job for good. Raises leases.Stale if the claim is void."""
+    """Compute and record. What the core refuses fails the job for good. Raises leases.Stale if the claim is void.
+
+    While the database is away, recording is tried again for `patience` seconds, then Overloaded is raised.
+    """
     observations, plan, dataset_digest = _load(database, claim)
     try:
         result = analyse(observations, plan, progress=progress)
     except LeastbendError as error:
-        fail_job(database, claim, error=describe(error), now=clock())
+        reason = describe(error)
+        _patiently(lambda: fail_job(database, claim, error=reason, now=clock()), patience)
         return
-    record_result(database, claim, result, machine, dataset_digest=dataset_digest, now=clock())
+    _patiently(
+        lambda: record_result(database, claim, result, machine, dataset_digest=dataset_digest, now=clock()), patience
+    )
 
 
 def record_result(
@@ -144,6 +153,17 @@ def describe(error: LeastbendError) -> dict[str, Any]:
 def error_document(code: str, message: str, errors: list[dict[str, str]] | None = None) -> dict[str, Any]:
     """Code, message and, for bad input, the fields."""
     return {"code": code, "message": message, "errors": errors or []}
+
+
+def _patiently(step: Callable[[], None], seconds: float) -> None:
+    deadline = time.monotonic() + seconds
+    while True:
+        try:
+            return step()
+        except Overloaded:
+            if time.monotonic() >= deadline:
+                raise
+            time.sleep(RECORD_AGAIN)
 
 
 def _load(database: Database, claim: Claim) -> tuple[Observations, Plan, str]:

@@ -38,13 +38,22 @@ def sweep(
     *,
     now: datetime,
     is_gone: Callable[[str], bool],
+    end: Callable[[str], None],
 ) -> Swept:
-    """`is_gone` says of a worker's name whether that process surely runs no more."""
+    """`is_gone` says of a worker's name whether that process surely runs no more; `end` kills it if it is of this host.
+
+    A worker that lost its lease and still lives hangs or is stopped, perhaps with the database's write lock in hand.
+    """
     done = {"requeued": 0, "timed_out": 0, "given_up": 0}
     with database.read() as connection:
-        lost = [held for held in leases.running(connection) if held.lease_until < now or is_gone(held.worker)]
+        held_now = leases.running(connection)
         due = leases.due(connection, now)
-    for held in lost:
+    silent = [held for held in held_now if held.lease_until < now]
+    for held in silent:
+        end(held.worker)
+    for held in held_now:
+        if held not in silent and not is_gone(held.worker):
+            continue
         with database.write() as connection:
             try:
                 done[_settle(connection, settings, held, now)] += 1

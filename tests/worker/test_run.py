@@ -12,7 +12,7 @@ import rfc8785
 
 from service.core.plan import Plan
 from service.core.result import Result
-from service.errors import InvalidInput, NotFound
+from service.errors import InvalidInput, NotFound, Overloaded
 from service.store import leases, verdicts
 from service.store.records import DatasetContent
 from service.store.tables import State
@@ -200,6 +200,27 @@ def test_an_outcome_is_recorded_whole_or_not_at_all(desk: Desk, monkeypatch: pyt
     assert desk.history(job_id) == ["queued", "started"]
     run_job(desk.database, claim, MACHINE, clock=lambda: at(3))
     assert desk.recorded() == (1, 1)
+
+
+def test_recording_is_tried_again_while_the_database_is_away(desk: Desk, monkeypatch: pytest.MonkeyPatch) -> None:
+    job_id = desk.put()
+    claim = desk.took()
+    tried = []
+    whole = run.record_result
+
+    def away_twice(*arguments: Any, **options: Any) -> None:
+        tried.append(options["now"])
+        if len(tried) < 3:
+            raise Overloaded("the database is starting", retry_after=5, code="database_away")
+        whole(*arguments, **options)
+
+    monkeypatch.setattr(run, "record_result", away_twice)
+    monkeypatch.setattr(run, "RECORD_AGAIN", 0.0)
+    with pytest.raises(Overloaded):
+        run_job(desk.database, claim, MACHINE, clock=lambda: at(2))
+    run_job(desk.database, claim, MACHINE, clock=lambda: at(3), patience=30)
+    assert tried == [at(2), at(3), at(3)]
+    assert desk.job(job_id).state == State.SUCCEEDED
 
 
 def test_results_are_plain_numbers_even_of_data_without_scatter(desk: Desk) -> None:

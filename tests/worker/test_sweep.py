@@ -15,7 +15,14 @@ from tests.jobs import MACHINE, Desk, at
 
 
 def swept(desk: Desk, seconds: float, *, gone: tuple[str, ...] = ()) -> Swept:
-    return sweep(desk.database, desk.transport, desk.settings, now=at(seconds), is_gone=lambda name: name in gone)
+    return sweep(
+        desk.database,
+        desk.transport,
+        desk.settings,
+        now=at(seconds),
+        is_gone=lambda name: name in gone,
+        end=lambda _name: None,
+    )
 
 
 def drain(transport: Transport) -> int:
