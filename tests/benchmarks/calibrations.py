@@ -43,7 +43,7 @@ CURVES: tuple[Callable[[Floats, float], Floats], ...] = (
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Calibration:
-    """One simulated dataset. `degree` and `power` are None for a curve that is no polynomial.
+    """One simulated dataset. `degree` is None for a curve that is no polynomial, `power` also for degree 0.
 
     weights: 1/variance where the uncertainties are known, else None. grid, truth: the true curve.
     """
@@ -56,6 +56,11 @@ class Calibration:
     errors: str
     grid: Floats
     truth: Floats
+
+    @property
+    def spare(self) -> int:
+        """Residual degrees of freedom at the true degree; of a curve that is no polynomial, at degree 4."""
+        return self.x.size - 1 - (4 if self.degree is None else self.degree)
 
     @property
     def highest(self) -> int:
@@ -81,8 +86,9 @@ def draw(rng: np.random.Generator) -> Calibration:
         values, truth = _smooth(rng, x, grid)
     else:
         degree = int(rng.integers(0, min(4, np.unique(x).size - 2, x.size - 3) + 1))
-        power = ("0.8", "0.99", "strong")[int(rng.integers(3))]
-        coefficients = _coefficients(rng, degree, power, x.size, quiet=errors == "nearly noise-free")
+        drawn: Power = ("0.8", "0.99", "strong")[int(rng.integers(3))]
+        coefficients = _coefficients(rng, degree, drawn, x.size, quiet=errors == "nearly noise-free")
+        power = drawn if degree else None  # a constant has no term that could be missed
         at_points, at_grid = orthonormal(x, sd, grid, degree)
         values, truth = at_points @ coefficients, at_grid @ coefficients
     y = values + sd * _noise(rng, errors, x.size)

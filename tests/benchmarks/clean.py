@@ -41,10 +41,13 @@ def draw(rng: np.random.Generator) -> tuple[Floats, Floats, int]:
     basis, _ = orthonormal(x, np.ones_like(x), x, degree)
     lead = effect("strong", x.size - degree - 1)
     size = np.append(rng.normal(size=degree) * 3 * lead, lead * rng.choice((-1, 1)))
-    # rising throughout, as a calibration does: the straight part outweighs the bend
-    size[1] = abs(size[1]) + (12 * lead if degree > 1 else 0)
+    size[1] = abs(size[1])
+    first, rises = np.unique(x, return_index=True)[1], basis @ size
+    while np.diff(rises[first]).min() < 0.25 * np.diff(rises[first]).mean():  # clear of flat, as a calibration is
+        size[1] = 1.5 * size[1] + lead
+        rises = basis @ size
     order = rng.permutation(x.size)
-    return x[order], (basis @ size + rng.normal(size=x.size))[order], degree
+    return x[order], (rises + rng.normal(size=x.size))[order], degree
 
 
 def analyses(sets: int, seed: int) -> Iterator[tuple[Result, int]]:

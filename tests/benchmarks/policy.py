@@ -2,17 +2,17 @@
 
 python -m tests.benchmarks.policy --sets 16000 --seed 1
 
-right: the exact degree, in % of the polynomial truths whose leading term has power 0.99 or more; strong: where its
-effect is twice that; 0.8: where its power is 0.8; over, under: chosen too high (all polynomial truths) and too low (at
-power 0.99 or more); R95, R99: quantiles of the error of the chosen curve against the true one, over that of the best
-degree; NP R95: the same where the truth is no polynomial.
+right: the exact degree, in % of the polynomial truths whose leading term has power 0.99 or more (constants, which have
+no such term, included); strong: where its effect is twice that; 0.8: where its power is 0.8; over, under: chosen too
+high (all polynomial truths) and too low (at power 0.99 or more); R95, R99: quantiles of the error of the chosen curve
+against the true one, over that of the best degree; NP R95: the same where the truth is no polynomial.
 """
 
 import argparse
 import time
 from collections import defaultdict
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -23,7 +23,7 @@ from service.core.plan import Plan, Resampling
 from tests.benchmarks.alternatives import ALTERNATIVES, Fits
 from tests.benchmarks.calibrations import Calibration, draw_many
 
-Rule = Callable[[Fits], int]
+Rule = Callable[[Fits], "int | tuple[int, Fits]"]  # the degree, and the fits it is of where the rule weighted anew
 NAMES = ("right", "strong", "0.8", "over", "under", "R95", "R99", "NP R95")
 
 
@@ -68,12 +68,15 @@ def bend(fits: Fits, *, screen: bool = True) -> int:
     return choose_degree(data.x, data.y, weights=data.weights, max_degree=data.highest, screen=screen)
 
 
-def bend_with_weights(fits: Fits) -> int:
-    """The whole default analysis: automatic weights, u_y where it is known."""
+def bend_with_weights(fits: Fits) -> tuple[int, Fits]:
+    """The whole default analysis: automatic weights, u_y where it is known. The curve is fitted as it is weighted."""
     data = fits.data
     u_y = None if data.weights is None else 1 / np.sqrt(data.weights)
     plan = Plan(min_degree=0, max_degree=data.highest, resampling=Resampling(scheme="leave_one_out"))
-    return analyse(observe(data.x, data.y, u_y=u_y), plan).chosen_degree
+    found = analyse(observe(data.x, data.y, u_y=u_y), plan)
+    by_name = {"1/x": 1 / data.x, "1/x^2": 1 / data.x**2}
+    weighted = replace(data, weights=by_name.get(found.weights.used, data.weights))
+    return found.chosen_degree, Fits(weighted, fits.rng)
 
 
 RULES: dict[str, Rule] = ALTERNATIVES | {
@@ -88,12 +91,12 @@ def run(sets: int, seed: int, rules: dict[str, Rule]) -> Figures:
     records: dict[str, Record] = defaultdict(Record)
     for i, data in enumerate(draw_many(sets, seed)):
         fits = Fits(data, np.random.default_rng([seed, i]))
-        best = float(fits.errors.min())
         drawn.append(data)
         for name, rule in rules.items():
-            chosen = rule(fits)
+            answer = rule(fits)
+            chosen, used = answer if isinstance(answer, tuple) else (answer, fits)
             records[name].off.append(None if data.degree is None else chosen - data.degree)
-            records[name].ratio.append(float(fits.errors[chosen]) / best)
+            records[name].ratio.append(float(used.errors[chosen] / used.errors.min()))
     return Figures(drawn, dict(records))
 
 
@@ -109,12 +112,19 @@ def table(figures: Figures, rules: dict[str, Rule]) -> str:
 def breakdown(figures: Figures, rule: str) -> str:
     """right and over of one rule by kind of error, and by number of points where errors are normal."""
     lines = []
+
+    def add(name: str, keep: Callable[[Calibration], bool]) -> None:
+        row = figures.row(rule, keep)
+        lines.append(f"{name:24} right {row['right']:5.1f}  over {row['over']:4.1f}  R95 {row['R95']:5.2f}")
+
     for kind in sorted({c.errors for c in figures.sets}):
-        row = figures.row(rule, lambda c, kind=kind: c.errors == kind)  # type: ignore[misc]
-        lines.append(f"{kind:24} right {row['right']:5.1f}  over {row['over']:4.1f}")
+        add(kind, lambda c, kind=kind: c.errors == kind)  # type: ignore[misc]
     for lo, hi in ((5, 8), (9, 15), (16, 40), (41, 200)):
-        row = figures.row(rule, lambda c, lo=lo, hi=hi: c.errors == "normal" and lo <= c.x.size <= hi)  # type: ignore[misc]
-        lines.append(f"{f'normal, n {lo} to {hi}':24} right {row['right']:5.1f}  over {row['over']:4.1f}")
+        add(f"normal, n {lo} to {hi}", lambda c, lo=lo, hi=hi: c.errors == "normal" and lo <= c.x.size <= hi)  # type: ignore[misc]
+    for power in ("0.8", "0.99", "strong"):
+        add(f"power {power}", lambda c, power=power: c.power == power)  # type: ignore[misc]
+    add("2 readings to spare", lambda c: c.spare == 2)
+    add("3 or more to spare", lambda c: c.spare >= 3)
     return "\n".join(lines)
 
 
