@@ -272,3 +272,24 @@ notifications = Table(
     CheckConstraint("state IN ('waiting', 'delivered', 'given_up')", name="state_known"),
     Index(None, "state", "next_at"),
 )
+
+figures = Table(  # drawn once; nothing here that cannot be drawn again
+    "figures",
+    metadata,
+    Column("job_id", Id, ForeignKey(jobs.c.id, ondelete="CASCADE"), primary_key=True),
+    Column("name", String(16), primary_key=True),
+    Column("format", String(8), primary_key=True),
+    Column("version", Integer, nullable=False),  # of the code that drew it
+    Column("digest", Digest, nullable=False),
+    Column("data", LargeBinary, nullable=False),
+    Column("made_at", Instant, nullable=False),
+)
+
+sessions = Table(  # of people who signed in to the pages with a key
+    "sessions",
+    metadata,
+    Column("hash", Digest, primary_key=True),  # SHA-256 of the cookie, which is 256 random bits
+    Column("key_id", Id, ForeignKey(keys.c.id, ondelete="CASCADE"), nullable=False, index=True),
+    Column("created_at", Instant, nullable=False),
+    Column("expires_at", Instant, nullable=False, index=True),
+)
