@@ -14,6 +14,7 @@ from service.store.database import Database
 from service.store.records import Claim, DatasetContent, JobRecord
 from service.store.tables import results, verdicts
 from service.store.transport import Transport
+from service.workflows.callers import Caller
 from service.workflows.provenance import Machine
 from service.workflows.run import take_job
 from service.workflows.submit import Submission, submit_job
@@ -47,10 +48,14 @@ class Desk:
     def put(self, seed: int = 0, *, by: str = "anna", priority: int = 0, seconds: float = 0, **more: Any) -> str:
         """Id of a new job."""
         plan = more.pop("plan", Plan())
-        asked = Submission(submitted_by=by, plan=plan, dataset=calibration(seed, **more), priority=priority)
-        return submit_job(
-            self.database, self.transport, self.settings, asked, now=self.start + timedelta(seconds=seconds)
-        )
+        asked = Submission(plan=plan, dataset=calibration(seed, **more), priority=priority)
+        return self.submit(asked, by=by, seconds=seconds)
+
+    def submit(self, asked: Submission, *, by: str = "anna", seconds: float = 0) -> str:
+        """Id of a new job."""
+        caller = Caller(name=by, role="submit")
+        now = self.start + timedelta(seconds=seconds)
+        return submit_job(self.database, self.transport, self.settings, caller, asked, repeat_key=None, now=now)
 
     def take(self, worker: str = "w1", *, seconds: float = 0, stalest: bool = False) -> Claim | None:
         """Claim the next job."""

@@ -46,7 +46,7 @@ class Fits:
     def rss(self) -> Floats:
         q, _, z = self._factors
         residuals = z[:, None] - np.cumsum(q * (q.T @ z), axis=1)
-        return np.sum(residuals**2, axis=0)
+        return np.maximum(np.sum(residuals**2, axis=0), 1e-24)  # coarse rounding can leave nothing at all
 
     @cached_property
     def df(self) -> Floats:

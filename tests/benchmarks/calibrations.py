@@ -1,5 +1,8 @@
 """Simulated calibrations whose truth is known, drawn from a seeded generator.
 
+A true degree leaves three readings or more to spare. With fewer nothing can be told, which the service says by its
+verdict, and the few such sets would rule the error quantiles of every rule.
+
 The effect of a term is its coefficient on the polynomial that is orthonormal over the points (under the true weights),
 in standard deviations of a reading: it is the noncentrality of the t-test of that term.
 """
@@ -18,6 +21,7 @@ Power = Literal["0.8", "0.99", "strong"]
 
 HIGHEST = 8
 GRID = 201  # points, even over the range, on which the error of a curve is taken
+SPARE = 3  # readings beyond the coefficients of the true degree
 SIZE = 0.05  # of the t-test by which effects are scaled
 ERRORS: dict[str, float] = {
     "normal": 0.45,
@@ -58,11 +62,6 @@ class Calibration:
     truth: Floats
 
     @property
-    def spare(self) -> int:
-        """Residual degrees of freedom at the true degree; of a curve that is no polynomial, at degree 4."""
-        return self.x.size - 1 - (4 if self.degree is None else self.degree)
-
-    @property
     def highest(self) -> int:
         """The highest degree that the rules try."""
         return min(HIGHEST, np.unique(self.x).size - 1, self.x.size - 2)
@@ -85,7 +84,7 @@ def draw(rng: np.random.Generator) -> Calibration:
     if rng.random() < NON_POLYNOMIAL:
         values, truth = _smooth(rng, x, grid)
     else:
-        degree = int(rng.integers(0, min(4, np.unique(x).size - 2, x.size - 3) + 1))
+        degree = int(rng.integers(0, min(4, np.unique(x).size - 2, x.size - 1 - SPARE) + 1))
         drawn: Power = ("0.8", "0.99", "strong")[int(rng.integers(3))]
         coefficients = _coefficients(rng, degree, drawn, x.size, quiet=errors == "nearly noise-free")
         power = drawn if degree else None  # a constant has no term that could be missed

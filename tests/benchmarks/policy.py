@@ -123,8 +123,7 @@ def breakdown(figures: Figures, rule: str) -> str:
         add(f"normal, n {lo} to {hi}", lambda c, lo=lo, hi=hi: c.errors == "normal" and lo <= c.x.size <= hi)  # type: ignore[misc]
     for power in ("0.8", "0.99", "strong"):
         add(f"power {power}", lambda c, power=power: c.power == power)  # type: ignore[misc]
-    add("2 readings to spare", lambda c: c.spare == 2)
-    add("3 or more to spare", lambda c: c.spare >= 3)
+    add("power 0.99 or more", lambda c: c.power != "0.8")
     return "\n".join(lines)
 
 

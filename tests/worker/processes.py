@@ -16,7 +16,7 @@ from service.worker.supervise import ONE_THREAD
 
 PROC = Path("/proc")
 FIFTY_MILLISECONDS = Plan(resampling=Resampling(repeats=1000))  # on some 30 points
-SECONDS = Plan(resampling=Resampling(folds=1000, repeats=1000))  # on some thousands of points
+SECONDS = Plan(resampling=Resampling(folds=200, repeats=1000))  # on some thousands of points
 
 
 class Workers:

@@ -18,7 +18,7 @@ from tests.jobs import Desk
 from tests.worker.processes import FIFTY_MILLISECONDS, SECONDS, Workers, alive, until
 
 pytestmark = pytest.mark.long
-LONG_JOB: dict[str, Any] = {"plan": SECONDS, "points": 8000}
+LONG_JOB: dict[str, Any] = {"plan": SECONDS, "points": 2500}
 
 
 def quick(settings: Settings, **changes: Any) -> Settings:

@@ -20,7 +20,7 @@ from service.workflows import run
 from service.workflows.provenance import this_machine
 from service.workflows.read import read_job, read_verdict
 from service.workflows.run import hand_back, pause, retry_job, run_job
-from service.workflows.submit import Submission, submit_job
+from service.workflows.submit import Submission
 from tests.jobs import MACHINE, Desk, at, calibration
 
 
@@ -225,10 +225,8 @@ def test_recording_is_tried_again_while_the_database_is_away(desk: Desk, monkeyp
 
 def test_results_are_plain_numbers_even_of_data_without_scatter(desk: Desk) -> None:
     x = np.arange(6.0)
-    asked = Submission(
-        submitted_by="anna", plan=Plan(max_degree=3), dataset=DatasetContent(subject="exact", x=x, y=2 * x)
-    )
-    job_id = submit_job(desk.database, desk.transport, desk.settings, asked, now=at(0))
+    asked = Submission(plan=Plan(max_degree=3), dataset=DatasetContent(subject="exact", x=x, y=2 * x))
+    job_id = desk.submit(asked)
     finish(desk)
 
     def refuse(word: str) -> None:
