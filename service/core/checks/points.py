@@ -7,6 +7,7 @@ from service.core.result import Evidence, Warning
 
 OUTLIER = 0.01
 OUTLIER_SERIOUS = 1e-4
+PULL_SERIOUS = 1.0  # of the standard deviation of a reading: from there on the curve is wrong by more than scatter
 COOK_NOTE = 1.0
 LEVERAGE_CAUTION = 0.95
 GAP_CAUTION = 2.0  # the curve in the gap is twice as uncertain as one reading
@@ -26,23 +27,24 @@ def suspect_point(found: Findings) -> Warning | None:
     if out and worst is not None and worst not in points:
         points.append(worst)
     named = ", ".join(f"{i + 1} (x = {found.observations.x[i]:g})" for i in points)
-    cook = found.cooks[worst] if worst is not None else np.nan
-    serious = changed or (
-        largest.p is not None and largest.p < OUTLIER_SERIOUS and bool(np.isnan(cook) or cook > COOK_NOTE)
-    )
-    message = (
-        f"Point {named} does not belong with the others"
-        if len(points) == 1
-        else (f"Points {named} do not belong with the others")
-    )
-    message += (
-        f"; without it the degree is {found.choice.walked.degree}, with it {found.choice.walked.degree_with_all}. The "
-        "degree was chosen without it, but the fitted curve still holds it. "
-        if changed
-        else " and pulls the curve. "
-        if serious
-        else ". "
-    )
+    pull = _pull(found, worst) if worst is not None else 0.0
+    pulls = largest.p is not None and largest.p < OUTLIER_SERIOUS and pull > PULL_SERIOUS
+    serious = changed or pulls
+    one = len(points) == 1
+    message = f"Point {named} does not" if one else f"Points {named} do not"
+    message += " belong with the others"
+    if changed:
+        walked = found.choice.walked
+        message += (
+            f"; without {'it' if one else 'them'} the degree is {walked.degree}, with {'it' if one else 'them'} "
+            f"{walked.degree_with_all}. The degree was chosen without, but the fitted curve still holds "
+            f"{'it' if one else 'them'}. "
+        )
+    elif pulls:
+        where = f"x = {found.observations.x[worst]:g}"
+        message += f"; the curve is pulled at {where} by {pull:.1f} times the scatter of the others. "
+    else:
+        message += ". "
     message += (
         "Check the reading and the standard used; repeat that level. Remove it only for a cause you can write down, "
         "and post the dataset again."
@@ -56,6 +58,16 @@ def suspect_point(found: Findings) -> Warning | None:
         ),
         method="largest externally studentised residual, Bonferroni p (Cook & Weisberg 1982, 2.2.2)",
     )
+
+
+def _pull(found: Findings, point: int) -> float:
+    """How far a point moves the curve at its place, in standard deviations of a reading as the others show it.
+
+    Cook's distance will not do here: a wild reading inflates the scatter that it is divided by.
+    """
+    h = min(float(found.full.leverage[point, found.degree]), 1.0)
+    t = float(found.studentised[point])
+    return abs(t) * h / float(np.sqrt(1 - h))
 
 
 def point_rules_fit(found: Findings) -> Warning | None:
