@@ -9,6 +9,7 @@ LeastbendError
 ├── Forbidden             the caller may not do this
 │   └── Unauthenticated   no key, or not a valid one
 ├── Overloaded            try again after `retry_after` seconds
+│   └── RateLimited       this caller has asked too often
 └── Unusable              the installation cannot run (database too new, disk full, ...)
 """
 
@@ -100,6 +101,12 @@ class Overloaded(LeastbendError):
     def __init__(self, message: str, *, retry_after: int, code: str | None = None) -> None:
         super().__init__(message, code=code)
         self.retry_after = retry_after
+
+
+class RateLimited(Overloaded):
+    """This caller has asked too often: try again after `retry_after` seconds."""
+
+    code = "rate_limited"
 
 
 class Unusable(LeastbendError):

@@ -3,6 +3,7 @@
 Every field is also an environment variable with the prefix LEASTBEND_ (LEASTBEND_DATA_DIR, LEASTBEND_PORT, ...).
 """
 
+import json
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Self
@@ -25,14 +26,29 @@ class Settings(BaseSettings):
     host: str = Field("127.0.0.1", description="Address to listen on; only loopback while there are no keys.")
     port: int = Field(8080, ge=0, le=65535, description="TCP port to listen on; 0 takes a free one.")
     workers: int = Field(2, ge=0, le=256, description="Worker processes that `serve` starts; 0 starts none.")
+    allowed_origins: tuple[str, ...] = Field(
+        (), description="Origins whose pages may call (CORS), as a JSON list; none by default."
+    )
     log_level: str = Field("INFO", pattern="^(DEBUG|INFO|WARNING|ERROR)$", description="Least severe level logged.")
 
     body_bytes: int = Field(32 * 2**20, ge=1024, description="Largest request body (413 above it).")
-    points: int = Field(1_000_000, ge=3, description="Most points of one dataset posted as JSON (413 above it).")
+    points: int = Field(1_000_000, ge=3, description="Most points of one dataset posted as JSON or CSV (413 above it).")
+    parquet_points: int = Field(20_000_000, ge=3, description="Most points of one dataset posted as Parquet.")
+    batch_size: int = Field(10_000, ge=1, description="Most datasets of one batch (413 above it).")
+    requests_per_minute: int = Field(
+        30_000, ge=0, description="Most requests of one key in a minute (429 beyond it); 0 sets no limit."
+    )
     queue_depth: int = Field(20_000, ge=1, description="Most jobs waiting; a post beyond it gets 503.")
     page_limit: int = Field(200, ge=1, le=10_000, description="Most items on one page of a list.")
     wait_seconds: float = Field(60.0, ge=0, le=3600, description="Longest wait granted to `Prefer: wait`.")
     wait_tick_seconds: float = Field(0.02, gt=0, le=10, description="How often waiting callers' jobs are looked up.")
+
+    notify_secret: str | None = Field(
+        None,
+        pattern="^whsec_[A-Za-z0-9+/]{32,}={0,2}$",
+        description="Signs notifications while there are no keys (each key has its own): whsec_ and base64.",
+    )
+    notify_private: bool = Field(False, description="Send notifications to private and loopback addresses too.")
 
     job_seconds: float = Field(600.0, gt=0, description="Longest run of one job; then it is stopped and failed.")
     max_attempts: int = Field(5, ge=1, le=100, description="Starts of one job before it is failed for good.")
@@ -63,4 +79,7 @@ class Settings(BaseSettings):
         """Environment variables that give a child process these settings."""
         values = self.model_dump(mode="json", exclude_none=True)
         values["data_dir"] = str(self.data_dir.absolute())
-        return {f"{PREFIX}{name.upper()}": str(value) for name, value in values.items()}
+        return {
+            f"{PREFIX}{name.upper()}": json.dumps(value) if isinstance(value, list) else str(value)
+            for name, value in values.items()
+        }

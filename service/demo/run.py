@@ -81,7 +81,7 @@ def _watched(client: Client, job: Json) -> Json:
 
 
 def _print_table(jobs: list[Json]) -> None:
-    rows = [("subject", "points", "degree", "verdict", "CV error", "what matters most")]
+    rows: list[tuple[str, ...]] = [("subject", "points", "degree", "verdict", "CV error", "what matters most")]
     rows += [_row(job) for job in jobs]
     widths = [max(len(row[i]) for row in rows) for i in range(len(rows[0]))]
     for i, row in enumerate(rows):

@@ -1,13 +1,13 @@
 """Jobs as callers see them: putting one in, reading one or many."""
 
-from dataclasses import fields
+from dataclasses import dataclass, fields
 from datetime import datetime
 from typing import Any
 
 from sqlalchemy import Connection, RowMapping, Select, func, insert, literal, select
 
 from service.store.records import JobDetail, JobFilter, JobRecord, Page
-from service.store.tables import FINAL, WAITING, State, jobs, plans, results
+from service.store.tables import WAITING, State, jobs, plans, results
 from service.store.turns import next_turn
 
 RECORD = tuple(jobs.c[one.name] for one in fields(JobRecord))
@@ -76,9 +76,24 @@ def newest(connection: Connection, wanted: JobFilter, *, before: str | None, lim
     return Page(items=tuple(rows[:limit]), after=rows[limit - 1].id if len(rows) > limit else None)
 
 
-def finished_among(connection: Connection, ids: list[str]) -> set[str]:
-    """Those of `ids` that have ended: one query, however many callers wait."""
-    return set(connection.execute(select(jobs.c.id).where(jobs.c.id.in_(ids), jobs.c.state.in_(FINAL))).scalars())
+@dataclass(frozen=True, slots=True)
+class Standing:
+    """Where a job stands; what those who watch it are told changes of."""
+
+    id: str
+    state: State
+    attempts: int
+    stage: str | None
+    stage_done: int | None
+
+
+def standings(connection: Connection, ids: list[str]) -> list[Standing]:
+    """Where these jobs stand: one query, however many callers watch."""
+    j = jobs.c
+    query = select(j.id, j.state, j.attempts, j.stage, j.stage_done).where(j.id.in_(ids))
+    return [
+        Standing(row.id, State(row.state), row.attempts, row.stage, row.stage_done) for row in connection.execute(query)
+    ]
 
 
 def _matching(query: Select[Any], wanted: JobFilter) -> Select[Any]:
@@ -87,6 +102,7 @@ def _matching(query: Select[Any], wanted: JobFilter) -> Select[Any]:
         (jobs.c.state, wanted.state),
         (jobs.c.verdict, wanted.verdict),
         (jobs.c.submitted_by, wanted.submitted_by),
+        (jobs.c.plan_digest, wanted.plan_digest),
     ):
         if value is not None:
             query = query.where(column == value)

@@ -17,4 +17,4 @@ def store(connection: Connection, document: bytes, digest: str, now: datetime) -
 
 def load(connection: Connection, digest: str) -> str:
     """The document; a job's plan is always there."""
-    return connection.execute(select(plans.c.document).where(plans.c.digest == digest)).scalar_one()
+    return str(connection.execute(select(plans.c.document).where(plans.c.digest == digest)).scalar_one())

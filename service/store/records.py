@@ -161,6 +161,7 @@ class JobFilter:
     submitted_by: str | None = None
     since: datetime | None = None
     until: datetime | None = None
+    plan_digest: str | None = None
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

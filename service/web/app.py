@@ -6,6 +6,7 @@ from datetime import datetime
 from importlib.metadata import version
 
 from fastapi import FastAPI
+from starlette.middleware.cors import CORSMiddleware
 
 from service.settings import Settings
 from service.store.clock import utc_now
@@ -14,16 +15,24 @@ from service.store.migrate import migrate
 from service.store.transport import open_transport
 from service.web import problems
 from service.web.context import Context
+from service.web.headers import SecurityHeaders
+from service.web.metrics import Measured, Metrics
 from service.web.openapi import describe
+from service.web.rates import Rates
 from service.web.requests import RequestIds
-from service.web.routes import datasets, health, jobs
+from service.web.routes import batches, datasets, events, jobs, operations, plans, reference, verdicts
+from service.web.schemas.batches import BatchBody, BatchItemView
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.jobs import JobBody
+from service.web.schemas.plans import NamedPlanBody
 from service.web.waiting import Waiting
+
+ROUTES = (datasets, jobs, verdicts, events, batches, plans, operations, reference)
 
 
 def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> FastAPI:
     """The service on this installation. Migrates the database when it starts; starts no workers."""
+    metrics = Metrics()
 
     @asynccontextmanager
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
@@ -31,7 +40,15 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
         migrate(database)
         transport = open_transport(settings)
         waiting = Waiting(database, tick=settings.wait_tick_seconds)
-        app.state.context = Context(settings=settings, database=database, transport=transport, waiting=waiting, now=now)
+        app.state.context = Context(
+            settings=settings,
+            database=database,
+            transport=transport,
+            waiting=waiting,
+            rates=Rates(settings.requests_per_minute),
+            metrics=metrics,
+            now=now,
+        )
         yield
         await waiting.close()
         transport.close()
@@ -39,8 +56,20 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
 
     app = FastAPI(title="Leastbend", version=version("leastbend"), lifespan=lifespan, docs_url=None, redoc_url=None)
     problems.install(app)
+    # The last added is the outermost.
+    app.add_middleware(Measured, metrics=metrics)
+    if settings.allowed_origins:
+        app.add_middleware(
+            CORSMiddleware,
+            allow_origins=settings.allowed_origins,
+            allow_methods=["GET", "POST", "DELETE"],
+            allow_headers=["Authorization", "Content-Type", "Idempotency-Key", "Prefer", "If-None-Match"],
+            expose_headers=["ETag", "Location", "Retry-After", "Preference-Applied", "X-Request-Id"],
+        )
+    app.add_middleware(SecurityHeaders)
     app.add_middleware(RequestIds)
-    for routes in (datasets, jobs, health):
+    for routes in ROUTES:
         app.include_router(routes.router)
-    describe(app, DatasetBody, JobBody)
+    app.mount("/docs/files", reference.ASSETS)
+    describe(app, DatasetBody, JobBody, BatchBody, NamedPlanBody, also=(BatchItemView,))
     return app

@@ -10,6 +10,8 @@ from fastapi import Depends, Request
 from service.settings import Settings
 from service.store.database import Database
 from service.store.transport import Transport
+from service.web.metrics import Metrics
+from service.web.rates import Rates
 from service.web.waiting import Waiting
 
 
@@ -21,7 +23,13 @@ class Context:
     database: Database
     transport: Transport
     waiting: Waiting
+    rates: Rates
+    metrics: Metrics
     now: Callable[[], datetime]
+
+    def page_size(self, limit: int) -> int:
+        """The size of a page that was asked for, within the installation's limit."""
+        return min(limit, self.settings.page_limit)
 
 
 def _context(request: Request) -> Context:

@@ -11,7 +11,7 @@ from typing import Any
 from fastapi import FastAPI
 from fastapi.openapi.utils import get_openapi
 from pydantic import BaseModel
-from pydantic.json_schema import models_json_schema
+from pydantic.json_schema import JsonSchemaMode, models_json_schema
 
 from service.store.migrate import resources
 from service.web.problems import MEDIA_TYPE
@@ -41,18 +41,18 @@ def takes(model: type[Body], *types: str) -> dict[str, Any]:
     return {"requestBody": {"required": True, "content": content}}
 
 
-def describe(app: FastAPI, *bodies: type[Body]) -> None:
-    """Give `app` its document, made when first asked for."""
+def describe(app: FastAPI, *bodies: type[Body], also: tuple[type[BaseModel], ...] = ()) -> None:
+    """Give `app` its document, made when first asked for: `bodies` that routes read, `also` lines that they stream."""
 
     def document() -> dict[str, Any]:
         if app.openapi_schema is None:
-            app.openapi_schema = _document(app, bodies)
+            app.openapi_schema = _document(app, bodies, also)
         return app.openapi_schema
 
     app.openapi = document  # type: ignore[method-assign]  # FastAPI's documented way
 
 
-def _document(app: FastAPI, bodies: tuple[type[Body], ...]) -> dict[str, Any]:
+def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[BaseModel], ...]) -> dict[str, Any]:
     document = get_openapi(
         title=app.title,
         version=app.version,
@@ -64,13 +64,18 @@ def _document(app: FastAPI, bodies: tuple[type[Body], ...]) -> dict[str, Any]:
         tags=[
             {"name": "datasets", "description": "Calibrations as posted."},
             {"name": "jobs", "description": "Fit-and-select of a dataset under a plan."},
+            {"name": "verdicts", "description": "The short statements for QA."},
+            {"name": "batches", "description": "Many datasets under one plan."},
+            {"name": "plans", "description": "Named, versioned plans."},
             {"name": "operations", "description": "Whether the service runs."},
         ],
         servers=[{"url": "/", "description": "This installation"}],
     )
-    models: list[tuple[type[BaseModel], str]] = [(body, "validation") for body in bodies]
-    _, extra = models_json_schema([*models, (Problem, "validation")], ref_template=REFERENCE)  # type: ignore[list-item]
-    document["components"]["schemas"] |= extra["$defs"]
+    read: tuple[type[BaseModel], ...] = (*bodies, Problem)
+    models: list[tuple[type[BaseModel], JsonSchemaMode]] = [(one, "validation") for one in read]
+    models += [(one, "serialization") for one in also]
+    _, extra = models_json_schema(models, ref_template=REFERENCE)
+    document["components"]["schemas"] = extra["$defs"] | document["components"]["schemas"]
     examples = examples_by_operation()
     for item in document["paths"].values():
         for method in METHODS:
@@ -89,8 +94,10 @@ def _complete(operation: dict[str, Any], examples: dict[str, dict[str, Any]]) ->
             _add(content[request.get("type", "application/json")], case, request)
         answer = operation["responses"].get(str(response["status"]))
         if answer is not None and "body" in response:
-            problem = response["status"] >= 400
-            _add(answer["content"][MEDIA_TYPE if problem else response.get("type", "application/json")], case, response)
+            content = answer["content"]
+            kind = MEDIA_TYPE if response["status"] >= 400 else response["type"]
+            if kind.endswith("json") and kind in content and "ndjson" not in kind:
+                _add(content[kind], case, response)
 
 
 def _add(content: dict[str, Any], case: str, example: dict[str, Any]) -> None:

@@ -3,8 +3,14 @@
 import base64
 import binascii
 import re
+from typing import Annotated
+
+from fastapi import Query
 
 from service.errors import InvalidInput
+
+Cursor = Annotated[str | None, Query(description="`next_cursor` of the page before.")]
+Limit = Annotated[int, Query(ge=1, le=200, description="Most items on the page.")]
 
 IDENTIFIER = re.compile(r"[0-9a-z-]{1,64}")
 

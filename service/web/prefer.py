@@ -2,7 +2,11 @@
 
 import re
 from collections.abc import Sequence
+from typing import Annotated
 
+from fastapi import Header
+
+Prefer = Annotated[str | None, Header(description="`wait=N`: answer when the job has ended, or after N seconds.")]
 WAIT = re.compile(r"wait\s*=\s*\"?(\d{1,6})\"?", re.IGNORECASE)
 
 

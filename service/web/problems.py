@@ -19,6 +19,7 @@ from service.errors import (
     MalformedInput,
     NotFound,
     Overloaded,
+    RateLimited,
     TooLarge,
     Unauthenticated,
     Unusable,
@@ -34,6 +35,7 @@ STATUS: tuple[tuple[type[LeastbendError], int], ...] = (  # the first that fits
     (Conflict, 409),
     (Unauthenticated, 401),
     (Forbidden, 403),
+    (RateLimited, 429),
     (Overloaded, 503),
     (Unusable, 503),
 )

@@ -8,7 +8,7 @@ from collections.abc import Awaitable, Callable, Sequence
 from typing import Any, TypeVar
 
 from fastapi import Request
-from pydantic import TypeAdapter, ValidationError
+from pydantic import ValidationError
 from starlette.concurrency import run_in_threadpool
 
 from service.errors import FieldError, InvalidInput, MalformedInput, TooLarge
@@ -28,22 +28,26 @@ class UnsupportedType(InvalidInput):
 
 def json_body(model: type[B]) -> Callable[[Request], Awaitable[B]]:
     """A dependency that answers the body as `model`. Raises MalformedInput, UnsupportedType, TooLarge, InvalidInput."""
-    adapter = TypeAdapter(model)
 
     async def read(request: Request) -> B:
         demand_type(request, "application/json")
         body = await read_body(request)
         if len(body) > LARGE:
-            return await run_in_threadpool(read_as, adapter, body)
-        return read_as(adapter, body)
+            return await run_in_threadpool(read_as, model, body)
+        return read_as(model, body)
 
     return read
 
 
-def read_as(adapter: TypeAdapter[B], body: bytes) -> B:
+def read_as(model: type[B], body: bytes) -> B:
     """Parse and validate."""
+    return read_value(model, parse_json(body))
+
+
+def read_value(model: type[B], value: Any) -> B:
+    """Validate. Raises InvalidInput."""
     try:
-        return adapter.validate_python(parse_json(body))
+        return model.model_validate(value)
     except ValidationError as error:
         raise InvalidInput(field_errors(error.errors(include_url=False, include_input=False))) from error
 

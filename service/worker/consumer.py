@@ -15,6 +15,7 @@ from service.store.database import Database, open_database
 from service.store.transport import QueueAway, Transport
 from service.worker.desk import Desk
 from service.worker.heartbeat import Heartbeat
+from service.worker.notifier import start_notifiers
 from service.worker.process import die_with, end, is_gone, worker_name
 from service.workflows.provenance import this_machine
 from service.workflows.sweep import sweep
@@ -81,6 +82,7 @@ class Sweeper(Scheduler):  # type: ignore[misc]
     def initialize(self) -> None:
         """In the new process: its own connections."""
         self._database = open_database(self._settings, durable=False)
+        start_notifiers(self._settings)
 
     def loop(self, now: Any = None) -> None:
         """One sweep."""

@@ -1,6 +1,7 @@
 """Take in a dataset or a job: check everything that a caller can mend, store, and only then acknowledge.
 
-Each function is one transaction. A job's id goes to the queue after the commit; if that fails, the sweep sends it.
+Each function is one writing transaction. A job's id goes to the queue after the commit; if that fails, the sweep
+sends it.
 """
 
 from collections.abc import Iterator
@@ -15,45 +16,113 @@ from service.core.observations import Observations, observe
 from service.core.plan import Plan
 from service.errors import FieldError, InvalidInput, NotFound, Overloaded, TooLarge
 from service.settings import Settings
-from service.store import datasets, events, jobs, plans
+from service.store import datasets, events, jobs, notifications, plans, repeats
 from service.store.clock import new_id
-from service.store.codec import digest, plan_document
+from service.store.codec import canonical, digest, plan_document
 from service.store.database import Database
 from service.store.records import DatasetContent, DatasetRecord
 from service.store.transport import Transport
+from service.workflows.callers import Caller
+from service.workflows.notify import check_url
+from service.workflows.plans import plan_named
 
 RETRY_WHEN_FULL = 5
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Submission:
-    """A job as asked for. Exactly one of `dataset_id` and `dataset` is given."""
+    """A job as asked for. Exactly one of `dataset_id` and `dataset`, at most one of `plan` and `plan_id`."""
 
-    submitted_by: str
-    plan: Plan
     dataset_id: str | None = None
     dataset: DatasetContent | None = None
+    plan: Plan | None = None
+    plan_id: str | None = None
     subject: str | None = None
     priority: int = 0
+    notify_url: str | None = None
 
 
 def post_dataset(
-    database: Database, settings: Settings, content: DatasetContent, *, now: datetime
+    database: Database, caller: Caller, content: DatasetContent, *, most: int, now: datetime
 ) -> tuple[DatasetRecord, bool]:
-    """Store a dataset; answers it and whether it is new. Raises InvalidInput, TooLarge."""
-    observed = observed_of(content, settings)
+    """Store a dataset of at most `most` points; answers it and whether it is new to this caller.
+
+    Raises InvalidInput, TooLarge, Forbidden.
+    """
+    caller.must_submit()
+    observed = observed_of(content, most)
+    document_digest = digest(datasets.dataset_document(content))
     with database.write() as connection:
-        dataset_id, new = _store(connection, content, observed, now)
+        dataset_id, new = keep_dataset(connection, caller, content, observed, document_digest, now)
         record = datasets.find(connection, dataset_id)
     if record is None:
         raise NotFound("the dataset is gone")
     return record, new
 
 
-def observed_of(content: DatasetContent, settings: Settings) -> Observations:
+def submit_job(
+    database: Database,
+    transport: Transport,
+    settings: Settings,
+    caller: Caller,
+    asked: Submission,
+    *,
+    repeat_key: str | None,
+    now: datetime,
+) -> str:
+    """Put in a job and answer its id; with a `repeat_key` (Idempotency-Key) that was used before, that job's id.
+
+    Raises InvalidInput, TooLarge, Overloaded, Forbidden.
+    """
+    caller.must_submit()
+    job_id = new_id()
+    plan = Plan() if asked.plan is None else asked.plan
+    if asked.plan_id is not None:
+        plan = plan_named(database, asked.plan_id)
+    if asked.notify_url is not None:
+        check_url(settings, caller, asked.notify_url)
+    observed, dataset_digest = _checked(database, caller, asked, plan, settings)
+    document = plan_document(plan)
+    plan_digest = digest(document)
+    fingerprint = digest(canonical([dataset_digest, plan_digest, asked.subject, asked.priority, asked.notify_url]))
+    with database.write() as connection:
+        if repeat_key is not None:
+            made = repeats.claim(
+                connection,
+                submitted_by=caller.name,
+                key=repeat_key,
+                fingerprint=fingerprint,
+                made_id=job_id,
+                now=now,
+            )
+            if made is not None:
+                return the_same(made, fingerprint)
+        demand_room(connection, settings, 1)
+        if asked.dataset is not None and observed is not None:
+            dataset_id, _ = keep_dataset(connection, caller, asked.dataset, observed, dataset_digest, now)
+            subject = asked.dataset.subject
+        else:
+            dataset_id, subject = _stored(connection, caller, asked.dataset_id or "")
+        plans.store(connection, document, plan_digest, now)
+        add_job(
+            connection,
+            caller,
+            job_id=job_id,
+            dataset_id=dataset_id,
+            plan_digest=plan_digest,
+            subject=asked.subject or subject,
+            priority=asked.priority,
+            notify_url=asked.notify_url,
+            now=now,
+        )
+    transport.send(job_id, asked.priority)
+    return job_id
+
+
+def observed_of(content: DatasetContent, most: int) -> Observations:
     """The dataset as the core sees it. Raises InvalidInput naming /x, /y, ..., and TooLarge."""
-    if content.x.size > settings.points:
-        raise TooLarge(f"the dataset has {content.x.size} points; at most {settings.points} are taken")
+    if content.x.size > most:
+        raise TooLarge(f"the dataset has {content.x.size} points; at most {most} are taken")
     return observe(
         content.x,
         content.y,
@@ -64,79 +133,115 @@ def observed_of(content: DatasetContent, settings: Settings) -> Observations:
     )
 
 
-def submit_job(
-    database: Database, transport: Transport, settings: Settings, asked: Submission, *, now: datetime
-) -> str:
-    """Put in a job and answer its id. Raises InvalidInput, TooLarge, NotFound, Overloaded."""
-    job_id = new_id()
-    observed = None
+def demand_room(connection: Connection, settings: Settings, jobs_to_come: int) -> None:
+    """Raises Overloaded if so many more jobs would be more than may wait."""
+    most = settings.queue_depth
+    if jobs.waiting(connection, at_most=most) + jobs_to_come > most:
+        message = f"the queue is full: at most {most} jobs may wait; nothing was stored"
+        raise Overloaded(message, retry_after=RETRY_WHEN_FULL, code="queue_full")
+
+
+def keep_dataset(
+    connection: Connection,
+    caller: Caller,
+    content: DatasetContent,
+    observed: Observations,
+    document_digest: str,
+    now: datetime,
+) -> tuple[str, bool]:
+    """Id of the stored dataset, and whether it is new to this caller."""
+    dataset_id, new = datasets.store(connection, content, document_digest, datasets.summarise(content, observed), now)
+    if not new:
+        new = datasets.find(connection, dataset_id, posted_by=caller.only_own) is None
+    datasets.posted(connection, dataset_id, caller.name)
+    return dataset_id, new
+
+
+def add_job(
+    connection: Connection,
+    caller: Caller,
+    *,
+    job_id: str,
+    dataset_id: str,
+    plan_digest: str,
+    subject: str,
+    priority: int,
+    notify_url: str | None,
+    now: datetime,
+) -> None:
+    """A waiting job, its first event, and whom to tell of its end."""
+    jobs.add(
+        connection,
+        job_id=job_id,
+        dataset_id=dataset_id,
+        plan_digest=plan_digest,
+        subject=subject,
+        submitted_by=caller.name,
+        priority=priority,
+        now=now,
+    )
+    events.add(connection, job_id, "queued", now, submitted_by=caller.name)
+    if notify_url is not None:
+        notifications.add(connection, job_id, notify_url)
+
+
+def the_same(made: repeats.Made, fingerprint: str) -> str:
+    """What the first post with this key made. Raises InvalidInput if that post asked for something else."""
+    if made.fingerprint != fingerprint:
+        message = "was used within 24 hours for another body; take a new key for a new job"
+        raise InvalidInput.at("/header/idempotency-key", message, code="key_reused")
+    return made.id
+
+
+def _checked(
+    database: Database, caller: Caller, asked: Submission, plan: Plan, settings: Settings
+) -> tuple[Observations | None, str]:
+    """Before the writing transaction, since it may read every point; datasets never change. Observations, digest."""
+    by_id: dict[str, str] = {} if asked.plan_id is None else {"/plan/": "/plan_id"}
     if asked.dataset is not None:
-        with _within("/dataset"):
-            observed = observed_of(asked.dataset, settings)
-        check(observed, asked.plan)
-    elif asked.dataset_id is not None:
-        _check_stored(database, asked.dataset_id, asked.plan, settings)
-    document = plan_document(asked.plan)
-    plan_digest = digest(document)
-    with database.write() as connection:
-        if jobs.waiting(connection, at_most=settings.queue_depth) >= settings.queue_depth:
-            raise Overloaded(
-                f"{settings.queue_depth} jobs are waiting, the most that are taken; nothing was stored",
-                retry_after=RETRY_WHEN_FULL,
-                code="queue_full",
-            )
-        if asked.dataset is not None and observed is not None:
-            dataset_id, _ = _store(connection, asked.dataset, observed, now)
-            subject = asked.dataset.subject
-        else:
-            found = datasets.find(connection, asked.dataset_id or "")
-            if found is None:
-                raise InvalidInput.at("/dataset_id", "names no dataset", code="no_such_dataset")
-            dataset_id, subject = found.id, found.subject
-        plans.store(connection, document, plan_digest, now)
-        jobs.add(
-            connection,
-            job_id=job_id,
-            dataset_id=dataset_id,
-            plan_digest=plan_digest,
-            subject=asked.subject or subject,
-            submitted_by=asked.submitted_by,
-            priority=asked.priority,
-            now=now,
-        )
-        events.add(connection, job_id, "queued", now, submitted_by=asked.submitted_by)
-    transport.send(job_id, asked.priority)
-    return job_id
-
-
-def _check_stored(database: Database, dataset_id: str, plan: Plan, settings: Settings) -> None:
-    """Before the writing transaction, since it reads every point; datasets never change."""
+        with below("/dataset"):
+            observed = observed_of(asked.dataset, settings.points)
+        with _named_by_id(by_id):
+            check(observed, plan)
+        return observed, digest(datasets.dataset_document(asked.dataset))
     with database.read() as connection:
+        dataset_id, _ = _stored(connection, caller, asked.dataset_id or "")
         loaded = datasets.load(connection, dataset_id)
     if loaded is None:
+        raise NotFound("the dataset is gone")
+    with _named_by_id(by_id | {"/dataset/": "/dataset_id"}):
+        check(observed_of(loaded[0], loaded[0].x.size), plan)
+    return None, loaded[1]
+
+
+def _stored(connection: Connection, caller: Caller, dataset_id: str) -> tuple[str, str]:
+    """Id and subject of a stored dataset that this caller may use."""
+    found = datasets.find(connection, dataset_id, posted_by=caller.only_own)
+    if found is None:
         raise InvalidInput.at("/dataset_id", f"there is no dataset {dataset_id}", code="no_such_dataset")
-    try:
-        check(observed_of(loaded[0], settings), plan)
-    except InvalidInput as error:
-        raise InvalidInput([_of_stored(one) for one in error.errors]) from error
-
-
-def _of_stored(error: FieldError) -> FieldError:
-    if not error.pointer.startswith("/dataset/"):
-        return error
-    where = error.pointer.removeprefix("/dataset/")
-    return FieldError("/dataset_id", f"{where} of the dataset {error.message}")
-
-
-def _store(connection: Connection, content: DatasetContent, observed: Observations, now: datetime) -> tuple[str, bool]:
-    summary = datasets.summarise(content, observed)
-    return datasets.store(connection, content, digest(datasets.dataset_document(content)), summary, now)
+    return found.id, found.subject
 
 
 @contextmanager
-def _within(place: str) -> Iterator[None]:
+def below(place: str) -> Iterator[None]:
     """Pointers of errors raised here are relative to `place` in the body."""
     try:
         yield
     except InvalidInput as error:
         raise InvalidInput([FieldError(place + one.pointer, one.message) for one in error.errors]) from error
+
+
+@contextmanager
+def _named_by_id(names: dict[str, str]) -> Iterator[None]:
+    """What stands in a stored document is named by the key of its id, since the body does not hold it."""
+    try:
+        yield
+    except InvalidInput as error:
+        raise InvalidInput([_named(one, names) for one in error.errors]) from error
+
+
+def _named(error: FieldError, names: dict[str, str]) -> FieldError:
+    for place, name in names.items():
+        if error.pointer.startswith(place):
+            return FieldError(name, f"{error.pointer.removeprefix(place)} of it {error.message}")
+    return error

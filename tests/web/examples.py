@@ -93,6 +93,44 @@ STEPS = (
          path={"job_id": "01a00000-0000-7000-8000-000000000000"}),
     Step(operation="list_jobs", case="succeeded", summary="Jobs that succeeded, the first page",
          query={"state": "succeeded", "limit": 1}),
+    Step(operation="post_dataset", case="as_csv", summary="As a table, with a semicolon",
+         query={"subject": "SM-LC-11", "x_unit": "kN", "y_unit": "mV/V"}, type="text/csv",
+         body="x;y\n5;0.2006\n10;0.4008\n15;0.6009\n20;0.8008\n25;1.0006\n"),
+    Step(operation="post_dataset", case="as_csv_wrong", summary="A table with a decimal comma",
+         query={"subject": "SM-LC-11"}, type="text/csv", body="x;y\n5;0,2006\n10;0,4008\n15;0,6009\n"),
+    Step(operation="post_plan", case="stored", summary="A plan under a name",
+         body={"name": "pressure transmitters", "plan": PLAN}),
+    Step(operation="post_plan", case="again", summary="The same plan again",
+         body={"name": "pressure transmitters", "plan": PLAN}),
+    Step(operation="get_plan", case="found", summary="One version", path={"plan_id": "{post_plan/stored}"}),
+    Step(operation="list_plans", case="newest", summary="The newest version of each name",
+         query={"newest_only": "true"}),
+    Step(operation="post_job", case="under_named_plan", summary="Under a named plan, safe to repeat",
+         headers={"Idempotency-Key": "\"b5a1c9e0-07\""},
+         body={"dataset_id": "{post_dataset/stored}", "plan_id": "{post_plan/stored}"}),
+    Step(operation="post_job", case="repeated", summary="The same again: the same job",
+         headers={"Idempotency-Key": "\"b5a1c9e0-07\""},
+         body={"dataset_id": "{post_dataset/stored}", "plan_id": "{post_plan/stored}"}),
+    Step(operation="post_job", case="key_reused", summary="The same key for another body",
+         headers={"Idempotency-Key": "\"b5a1c9e0-07\""}, body={"dataset_id": "{post_dataset/stored}"}),
+    Step(operation="cancel_job", case="waiting", summary="Cancelled before it ran",
+         path={"job_id": "{post_job/under_named_plan}"}),
+    Step(operation="cancel_job", case="ended", summary="It has ended", path={"job_id": "{post_job/queued}"}),
+    Step(operation="post_batch", case="three", summary="Three datasets, one of them bad",
+         body={"datasets": [DATASET, BOWED, {"subject": "SM-XX-00", "x": [1, 2, 3], "y": [1, 2]}], "plan": PLAN}),
+    Step(operation="post_batch", case="as_ndjson", summary="A dataset a line",
+         query={"plan_id": "{post_plan/stored}"}, type="application/x-ndjson",
+         body="\n".join(json.dumps(one) for one in (DATASET, BOWED))),
+    Step(operation="get_batch", case="ended", summary="All of its jobs have ended",
+         path={"batch_id": "{post_batch/three}"}, work=True),
+    Step(operation="get_batch_results", case="three", summary="An item a line",
+         path={"batch_id": "{post_batch/three}"}),
+    Step(operation="list_batches", case="page", summary="Batches, newest first", query={"limit": 1}),
+    Step(operation="list_verdicts", case="newest", summary="The newest verdict of each subject",
+         query={"newest_only": "true"}),
+    Step(operation="get_job_events", case="ended", summary="What happened to a job that has ended",
+         path={"job_id": "{post_job/queued}"}),
+    Step(operation="get_metrics", case="now", summary="Prometheus metrics"),
 )
 # fmt: on
 
@@ -140,8 +178,19 @@ def answer_of(summary: str, response: httpx.Response) -> dict[str, Any]:
     kind = response.headers.get("content-type", "").split(";")[0]
     if response.content:
         answer["type"] = kind
-        answer["body"] = response.json() if kind.endswith("json") else response.text
+        answer["body"] = _body(kind, response.text)
     return answer
+
+
+def _body(kind: str, text: str) -> Any:
+    if kind == "application/x-ndjson":
+        return [json.loads(line) for line in text.splitlines()]
+    if kind == "text/event-stream":  # each event as the fields that a caller's library gives it
+        events = [dict(line.split(": ", 1) for line in event.splitlines()) for event in text.strip().split("\n\n")]
+        return [event | {"data": json.loads(event["data"])} for event in events]
+    if kind == "text/plain":  # the names alone: the numbers are of the moment
+        return sorted({line.split("{")[0].split(" ")[0] for line in text.splitlines() if not line.startswith("#")})
+    return json.loads(text)
 
 
 def paths_of(service: Service) -> dict[str, tuple[str, str]]:

@@ -8,7 +8,7 @@ from pydantic import Field, model_validator
 
 from service.core.plan import Plan
 from service.store.clock import rfc3339
-from service.store.records import JobDetail, JobRecord
+from service.store.records import JobDetail, JobRecord, NotificationRecord
 from service.web.schemas.common import Answer, Body, FieldProblem, Label
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.plans import PlanBody
@@ -24,14 +24,20 @@ class JobBody(Body):
 
     dataset_id: Label | None = Field(None, description="A dataset that was posted before.")
     dataset: DatasetBody | None = Field(None, description="The dataset itself; it is stored as by POST /v1/datasets.")
-    plan: PlanBody | None = Field(None, description="Absent: every default.")
+    plan: PlanBody | None = Field(None, description="Absent, and no plan_id: every default.")
+    plan_id: Label | None = Field(None, description="One version of a named plan.")
     subject: Label | None = Field(None, description="Absent: the dataset's.")
     priority: Priority = Field(0, description="Higher runs first.")
+    notify_url: Annotated[str, Field(max_length=2000, pattern=r"^[\x21-\x7e]+$")] | None = Field(
+        None, description="Told of the job's end by a POST signed after the Standard Webhooks specification."
+    )
 
     @model_validator(mode="after")
     def _one_dataset(self) -> Self:
         if (self.dataset_id is None) == (self.dataset is None):
             raise ValueError("give exactly one of dataset_id and dataset")
+        if self.plan is not None and self.plan_id is not None:
+            raise ValueError("give at most one of plan and plan_id")
         return self
 
 
@@ -72,10 +78,22 @@ class JobSummary(Answer):
     error: JobError | None
 
 
+class Notification(Answer):
+    """Whom to tell of the job's end, and how far that has come."""
+
+    url: str
+    state: Literal["waiting", "delivered", "given_up"]
+    attempts: int
+    next_at: datetime | None
+    last_at: datetime | None
+    last_answer: str | None
+
+
 class JobView(JobSummary):
     """One job, with its plan and, once it succeeded, its result."""
 
     plan: Plan = Field(description="The whole plan, defaults included.")
+    notification: Notification | None = Field(description="Where `notify_url` was given.")
     result: JobResult | None
 
 
@@ -126,10 +144,24 @@ def job_summary(job: JobRecord) -> dict[str, Any]:
     }
 
 
-def job_document(detail: JobDetail) -> bytes:
+def job_document(detail: JobDetail, notification: NotificationRecord | None) -> bytes:
     """The JSON of JobView. Stored documents are spliced in as they are: nothing is rounded or reordered on the way."""
     result = "null"
     if detail.result is not None and detail.provenance is not None:
         result = f'{detail.result[:-1]},"provenance":{detail.provenance}}}'
-    head = json.dumps(job_summary(detail.job), allow_nan=False, ensure_ascii=False)
-    return f'{head[:-1]},"plan":{detail.plan},"result":{result}}}'.encode()
+    head = job_summary(detail.job) | {"notification": _notification(notification)}
+    text = json.dumps(head, allow_nan=False, ensure_ascii=False)
+    return f'{text[:-1]},"plan":{detail.plan},"result":{result}}}'.encode()
+
+
+def _notification(found: NotificationRecord | None) -> dict[str, Any] | None:
+    if found is None:
+        return None
+    return {
+        "url": found.url,
+        "state": found.state,
+        "attempts": found.attempts,
+        "next_at": None if found.next_at is None else rfc3339(found.next_at),
+        "last_at": None if found.last_at is None else rfc3339(found.last_at),
+        "last_answer": found.last_answer,
+    }

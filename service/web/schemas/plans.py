@@ -1,6 +1,8 @@
 """The plan as posted: the core's plan, field by field, with its defaults."""
 
+import json
 from dataclasses import fields
+from datetime import datetime
 from typing import Annotated, Any, Literal, TypeVar
 
 from pydantic import Field
@@ -16,7 +18,9 @@ from service.core.plan import (
     Weights,
 )
 from service.errors import FieldError, InvalidInput
-from service.web.schemas.common import Body, Finite
+from service.store.clock import rfc3339
+from service.store.named_plans import NamedPlan
+from service.web.schemas.common import Answer, Body, Finite, Label
 
 T = TypeVar("T")
 
@@ -89,6 +93,38 @@ class PlanBody(Body):
             )
         except InvalidInput as error:
             raise InvalidInput([FieldError(place + one.pointer, one.message) for one in error.errors]) from error
+
+
+class NamedPlanBody(Body):
+    """A plan to be kept under a name."""
+
+    name: Label
+    plan: PlanBody
+
+
+class NamedPlanView(Answer):
+    """One version of a named plan."""
+
+    id: str = Field(description="Names this version: `plan_id` of jobs and batches.")
+    name: str
+    version: int
+    plan_digest: str
+    created_by: str
+    created_at: datetime
+    plan: Plan = Field(description="The whole plan, defaults included.")
+
+
+def named_plan_document(plan: NamedPlan) -> bytes:
+    """The JSON of NamedPlanView; the plan as it is stored."""
+    head = {
+        "id": plan.id,
+        "name": plan.name,
+        "version": plan.version,
+        "plan_digest": plan.plan_digest,
+        "created_by": plan.created_by,
+        "created_at": rfc3339(plan.created_at),
+    }
+    return f'{json.dumps(head, ensure_ascii=False)[:-1]},"plan":{plan.document}}}'.encode()
 
 
 def _own(body: Body, kind: type[Any], *but: str) -> dict[str, Any]:

@@ -1,0 +1,133 @@
+"""Many datasets at once under one plan: each is taken or refused by itself, all in one transaction."""
+
+from collections.abc import Iterator, Sequence
+from datetime import datetime
+from typing import Any
+
+from service.core.analysis import check
+from service.core.observations import Observations
+from service.core.plan import Plan
+from service.errors import InvalidInput, LeastbendError, NotFound, TooLarge
+from service.settings import Settings
+from service.store import batches, datasets, plans, repeats
+from service.store.batches import BatchItem, BatchRecord
+from service.store.clock import new_id
+from service.store.codec import canonical, digest, plan_document
+from service.store.database import Database
+from service.store.records import DatasetContent, Page
+from service.store.transport import Transport
+from service.workflows.callers import Caller
+from service.workflows.run import describe
+from service.workflows.submit import add_job, below, demand_room, keep_dataset, observed_of, the_same
+
+Posted = DatasetContent | InvalidInput
+MESSAGES = 200  # sent at once; the sweep sends the rest as they are needed
+ROWS = 200  # of the results, in one reading transaction
+
+
+def submit_batch(
+    database: Database,
+    transport: Transport,
+    settings: Settings,
+    caller: Caller,
+    posted: Sequence[Posted],
+    plan: Plan,
+    *,
+    priority: int,
+    repeat_key: str | None,
+    now: datetime,
+) -> str:
+    """Put in one job for each good dataset and keep the reason for each bad one; the batch's id.
+
+    Raises TooLarge, InvalidInput, Overloaded, Forbidden.
+    """
+    caller.must_submit()
+    if not posted:
+        raise InvalidInput.at("/datasets", "holds no dataset")
+    if len(posted) > settings.batch_size:
+        raise TooLarge(f"the batch has {len(posted)} datasets; at most {settings.batch_size} are taken")
+    checked = [_checked(one, plan, settings) for one in posted]
+    document = plan_document(plan)
+    plan_digest, batch_id = digest(document), new_id()
+    named = [digest(canonical(one)) if isinstance(one, dict) else one[2] for one in checked]
+    fingerprint = digest(canonical([*named, plan_digest, priority]))
+    job_ids: list[str] = []
+    with database.write() as connection:
+        if repeat_key is not None:
+            made = repeats.claim(
+                connection,
+                submitted_by=caller.name,
+                key=repeat_key,
+                fingerprint=fingerprint,
+                made_id=batch_id,
+                now=now,
+            )
+            if made is not None:
+                return the_same(made, fingerprint)
+        demand_room(connection, settings, sum(not isinstance(one, dict) for one in checked))
+        plans.store(connection, document, plan_digest, now)
+        items: list[tuple[str | None, dict[str, Any] | None]] = []
+        for one in checked:
+            if isinstance(one, dict):
+                items.append((None, one))
+                continue
+            content, observed, dataset_digest = one
+            dataset_id, _ = keep_dataset(connection, caller, content, observed, dataset_digest, now)
+            job_ids.append(new_id())
+            items.append((job_ids[-1], None))
+            add_job(
+                connection,
+                caller,
+                job_id=job_ids[-1],
+                dataset_id=dataset_id,
+                plan_digest=plan_digest,
+                subject=content.subject,
+                priority=priority,
+                notify_url=None,
+                now=now,
+            )
+        batches.add(
+            connection, batch_id=batch_id, submitted_by=caller.name, plan_digest=plan_digest, now=now, items=items
+        )
+    for job_id in job_ids[:MESSAGES]:
+        transport.send(job_id, priority)
+    return batch_id
+
+
+def _checked(one: Posted, plan: Plan, settings: Settings) -> tuple[DatasetContent, Observations, str] | dict[str, Any]:
+    if isinstance(one, InvalidInput):
+        return describe(one)
+    try:
+        with below("/dataset"):
+            observed = observed_of(one, settings.points)
+        check(observed, plan)
+    except LeastbendError as error:
+        return describe(error)
+    return one, observed, digest(datasets.dataset_document(one))
+
+
+def read_batch(database: Database, caller: Caller, batch_id: str) -> BatchRecord:
+    """One batch with its progress. Raises NotFound."""
+    with database.read() as connection:
+        found = batches.find(connection, batch_id)
+    if found is None or caller.only_own not in (None, found.submitted_by):
+        raise NotFound(f"there is no batch {batch_id}")
+    return found
+
+
+def list_batches(database: Database, caller: Caller, *, before: str | None, limit: int) -> Page[BatchRecord]:
+    """Batches, newest first."""
+    with database.read() as connection:
+        return batches.newest(connection, submitted_by=caller.only_own, before=before, limit=limit)
+
+
+def batch_results(database: Database, batch_id: str) -> Iterator[BatchItem]:
+    """Every item of a batch in order, read bit by bit, so that a large one needs no more memory than a small one."""
+    after = -1
+    while True:
+        with database.read() as connection:
+            some = batches.items(connection, batch_id, after=after, limit=ROWS)
+        yield from some
+        if len(some) < ROWS:
+            return
+        after = some[-1].position
