@@ -60,7 +60,7 @@ def _exact_power(exact: ExactFit, rss: float, df: int, absolute: bool) -> PowerB
     sd, t = exact.power_sd, exact.t
     if absolute and rss > 0:
         root = math.sqrt(rss / df)
-        sd = tuple(None if v is None else v / root for v in sd)
+        sd = tuple(None if v is None or not math.isfinite(v / root) else v / root for v in sd)
         t = tuple(None if v is None else v * root for v in t)
     representable = all(v is not None for v in exact.power)
     return PowerBasis(

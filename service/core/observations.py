@@ -11,8 +11,8 @@ from service.errors import FieldError, InvalidInput
 Floats = npt.NDArray[np.float64]
 Integers = npt.NDArray[np.intp]
 
-LARGEST = 1e150  # squares of what we accept stay finite
-SMALLEST = 1e-150  # and do not vanish
+LARGEST = 1e60  # squares of y over u stay finite, whatever is accepted,
+SMALLEST = 1e-60  # and do not vanish
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)

@@ -116,7 +116,7 @@ def back_calculate(found: Findings) -> Floats:
 
 
 def allowed_error(asked: MaxPermissibleError, found: Findings, at_x: Floats) -> Floats:
-    """The permissible error at each x in the unit of what it is of (y or x); NaN where a value is 0."""
+    """The permissible error at each x in the unit of what it is of (y or x); NaN where what it is a share of is 0."""
     value = asked.value
     if asked.kind == "absolute":
         return np.full(at_x.shape, value)
@@ -125,7 +125,7 @@ def allowed_error(asked: MaxPermissibleError, found: Findings, at_x: Floats) -> 
         lo, hi = found.working_range
         ends = value_at(found.coefficients, found.full.domain, np.array([lo, hi]))
         span = hi - lo if asked.of == "x" else abs(float(ends[1] - ends[0]))
-        return np.full(at_x.shape, value / 100 * span)
+        return np.full(at_x.shape, value / 100 * span if span > 0 else np.nan)
     size = np.abs(at_x if asked.of == "x" else y)
     return np.where(size > 0, value / 100 * size, np.nan)
 

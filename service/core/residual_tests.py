@@ -38,10 +38,11 @@ def breusch_pagan(fits: NestedFits, degree: int) -> Statistic:
         q = fits.q[:, : degree + 1]
     else:
         q = reduced_qr(basis(fits.x, fits.domain, degree, True))[0]
-    squares = fits.residuals[:, degree] ** 2
+    e = fits.residuals[:, degree]
+    squares = (e / np.abs(e).max()) ** 2  # relative: their squares must stay within the range of a double
     off = squares - squares.mean()
     total = float(off @ off)
-    if total <= (1e-14 * float(squares.max())) ** 2 * fits.n:
+    if total <= 1e-28 * fits.n:
         return Statistic(statistic=0.0, df=(degree,), p=1.0, method=method)
     fitted = q.T @ off
     lm = fits.n * min(1.0, float(fitted @ fitted) / total)

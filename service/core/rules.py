@@ -70,12 +70,14 @@ def _one_standard_error(held: HeldOut, min_degree: int, lowest: int | None) -> R
 def _standard_error(fold_mean: Floats, repeat_of: Integers) -> float | None:
     """Of the mean over the folds of a repeat, averaged over the repeats that hold two folds or more."""
     count = np.bincount(repeat_of)
+    scale = float(fold_mean.max()) or 1.0  # squares of squares leave the range of a double for units far from 1
+    fold_mean = fold_mean / scale
     off = fold_mean - (np.bincount(repeat_of, weights=fold_mean) / count)[repeat_of]
     usable = count > 1
     if not usable.any():
         return None
     squares, k = np.bincount(repeat_of, weights=off * off)[usable], count[usable]
-    return float(np.mean(np.sqrt(squares / (k - 1) / k)))
+    return scale * float(np.mean(np.sqrt(squares / (k - 1) / k)))
 
 
 def stability_by_repeat(rule: Rule, held: HeldOut, min_degree: int) -> list[int]:

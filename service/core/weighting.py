@@ -16,6 +16,7 @@ from service.core.observations import Floats, Observations
 from service.core.plan import Plan
 from service.core.result import WeightChoice, WeightModel
 from service.core.screen import Walked, choose_with_screen
+from service.errors import InvalidInput
 
 GAIN_NEEDED = 2.0  # of log-likelihood, to leave equal weights
 RATIO_NEEDED = 1.5  # of the largest |x| to the least, for 1/x to differ from 1
@@ -127,7 +128,11 @@ def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: i
             walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
             degree = min(max(walked.degree, plan.min_degree), fits.top)
             slope = slope_at(fits, degree, x)
-            new = 1.0 / (variance + (slope * observations.u_x) ** 2)
+            with np.errstate(over="ignore"):
+                effective = variance + (slope * observations.u_x) ** 2
+            if not np.isfinite(effective).all():
+                raise InvalidInput.at("/dataset/u_x", "is too large: it swamps the whole range of the readings")
+            new = 1.0 / effective
             change = float(np.max(np.abs(new / fits.weights - 1)))
             full = design.fit(new)
             if change < 1e-10:
