@@ -10,9 +10,11 @@ from sqlalchemy import func, select
 from service.core.plan import Plan
 from service.settings import Settings
 from service.store import events, jobs
+from service.store import verdicts as verdict_store
 from service.store.database import Database
-from service.store.records import Claim, DatasetContent, JobRecord
-from service.store.tables import results, verdicts
+from service.store.records import Claim, DatasetContent, JobRecord, VerdictRecord
+from service.store.tables import jobs as jobs_table
+from service.store.tables import plans, results, verdicts
 from service.store.transport import Transport
 from service.workflows.callers import Caller
 from service.workflows.provenance import Machine
@@ -73,6 +75,24 @@ class Desk:
         """Its row."""
         with self.database.read() as connection:
             found = jobs.find(connection, job_id)
+        assert found is not None
+        return found
+
+    def documents(self, job_id: str) -> tuple[str, str, str]:
+        """Plan, result and provenance, as stored."""
+        query = (
+            select(plans.c.document, results.c.document.label("result"), results.c.provenance)
+            .join(jobs_table, jobs_table.c.plan_digest == plans.c.digest)
+            .join(results, results.c.job_id == jobs_table.c.id)
+            .where(jobs_table.c.id == job_id)
+        )
+        with self.database.read() as connection:
+            return tuple(connection.execute(query).one())
+
+    def verdict(self, job_id: str) -> VerdictRecord:
+        """The verdict it ended with."""
+        with self.database.read() as connection:
+            found = verdict_store.of_job(connection, job_id)
         assert found is not None
         return found
 

@@ -47,7 +47,6 @@ def sweep(
     done = {"requeued": 0, "timed_out": 0, "given_up": 0}
     with database.read() as connection:
         held_now = leases.running(connection)
-        due = leases.due(connection, now)
     silent = [held for held in held_now if held.lease_until < now]
     for held in silent:
         end(held.worker)
@@ -59,6 +58,8 @@ def sweep(
                 done[_settle(connection, settings, held, now)] += 1
             except leases.Stale:
                 continue  # it lives, or another sweep was first
+    with database.read() as connection:
+        due = leases.due(connection, now)
     return Swept(**done, sent=_send_missing(transport, due))
 
 
@@ -72,7 +73,9 @@ def _settle(connection: Connection, settings: Settings, held: Held, now: datetim
         message = f"its worker was lost in each of {held.attempts} attempts"
         _give_up(connection, held, now, "worker_lost", message)
         return "given_up"
-    leases.give_back(connection, held.id, held.token, run_after=now + pause(settings, held.attempts))
+    # Losing a worker is seldom the job's fault: the first time it waits for nothing.
+    wait = pause(settings, held.attempts) if held.attempts > 1 else timedelta()
+    leases.give_back(connection, held.id, held.token, run_after=now + wait)
     events.add(connection, held.id, "requeued", now, reason="its worker was lost", attempt=held.attempts)
     return "requeued"
 

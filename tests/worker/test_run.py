@@ -12,13 +12,12 @@ import rfc8785
 
 from service.core.plan import Plan
 from service.core.result import Result
-from service.errors import InvalidInput, NotFound, Overloaded
+from service.errors import InvalidInput, Overloaded
 from service.store import leases, verdicts
 from service.store.records import DatasetContent
 from service.store.tables import State
 from service.workflows import run
 from service.workflows.provenance import this_machine
-from service.workflows.read import read_job, read_verdict
 from service.workflows.run import hand_back, pause, retry_job, run_job
 from service.workflows.submit import Submission
 from tests.jobs import MACHINE, Desk, at, calibration
@@ -31,18 +30,16 @@ def finish(desk: Desk, *, seconds: float = 2) -> None:
 def test_a_job_succeeds_with_result_provenance_verdict_and_event(desk: Desk) -> None:
     job_id = desk.put(3, by="anna")
     run_job(desk.database, desk.took("w1", seconds=1), this_machine(), clock=lambda: at(2))
-    detail = read_job(desk.database, job_id)
-    assert detail.job.state == State.SUCCEEDED
-    assert (detail.job.started_at, detail.job.finished_at) == (at(1), at(2))
-    assert detail.result is not None
-    assert detail.provenance is not None
-    result, origin = json.loads(detail.result), json.loads(detail.provenance)
-    verdict = json.loads(read_verdict(desk.database, job_id).document)
+    job = desk.job(job_id)
+    assert job.state == State.SUCCEEDED
+    assert (job.started_at, job.finished_at) == (at(1), at(2))
+    plan, result, origin = (json.loads(document) for document in desk.documents(job_id))
+    verdict = json.loads(desk.verdict(job_id).document)
 
-    assert result["chosen_degree"] == detail.job.chosen_degree == verdict["chosen_degree"]
-    assert result["verdict"]["verdict"] == detail.job.verdict == verdict["verdict"]
+    assert result["chosen_degree"] == job.chosen_degree == verdict["chosen_degree"]
+    assert result["verdict"]["verdict"] == job.verdict == verdict["verdict"]
     assert hashlib.sha256(rfc8785.dumps(result)).hexdigest() == origin["result_digest"] == verdict["result_digest"]
-    assert hashlib.sha256(rfc8785.dumps(json.loads(detail.plan))).hexdigest() == origin["plan_digest"]
+    assert hashlib.sha256(rfc8785.dumps(plan)).hexdigest() == origin["plan_digest"]
     assert origin["folds_digest"] == result["resampling"]["digest"]
     assert set(origin["versions"]) == {"leastbend", "python", "numpy", "scipy", "statsmodels", "scikit-learn"}
     assert {pool["library"] for pool in origin["blas"]} == {"openblas"}
@@ -59,7 +56,7 @@ def test_the_dataset_digest_is_of_what_was_posted(desk: Desk) -> None:
     job_id = desk.put(4)
     finish(desk)
     posted = {"subject": content.subject, "x": content.x.tolist(), "y": content.y.tolist()}
-    origin = json.loads(read_job(desk.database, job_id).provenance or "")
+    origin = json.loads(desk.documents(job_id)[2])
     assert origin["dataset_digest"] == hashlib.sha256(rfc8785.dumps(posted)).hexdigest()
 
 
@@ -67,7 +64,7 @@ def test_the_same_dataset_and_plan_give_the_same_result_digest(desk: Desk) -> No
     first, second = desk.put(5), desk.put(5, by="bert")
     finish(desk)
     finish(desk)
-    digests = [json.loads(read_job(desk.database, one).provenance or "")["result_digest"] for one in (first, second)]
+    digests = [json.loads(desk.documents(one)[2])["result_digest"] for one in (first, second)]
     assert digests[0] == digests[1]
 
 
@@ -77,7 +74,7 @@ def test_verdicts_are_chained_in_order_of_issue(desk: Desk) -> None:
         finish(desk)
     previous = None
     for job_id in ids:
-        issued = read_verdict(desk.database, job_id)
+        issued = desk.verdict(job_id)
         assert json.loads(issued.document)["previous"] == previous
         assert hashlib.sha256(issued.document.encode()).hexdigest() == issued.digest
         previous = issued.digest
@@ -95,7 +92,7 @@ def test_verdicts_issued_at_once_still_form_one_chain(desk: Desk) -> None:
         thread.start()
     for thread in threads:
         thread.join()
-    issued = [read_verdict(desk.database, job_id) for job_id in ids]
+    issued = [desk.verdict(job_id) for job_id in ids]
     after = {json.loads(one.document)["previous"]: one.digest for one in issued}
     assert len(after) == 8
     link, seen = None, 0
@@ -132,8 +129,6 @@ def test_what_the_core_refuses_fails_for_good_and_says_why(desk: Desk, monkeypat
     }
     assert desk.history(job_id) == ["queued", "started", "failed"]
     assert desk.recorded() == (0, 0)
-    with pytest.raises(NotFound):
-        read_verdict(desk.database, job_id)
 
 
 def test_the_unforeseen_is_tried_again_with_growing_pauses_then_fails(desk: Desk) -> None:
@@ -172,10 +167,10 @@ def test_an_outcome_under_a_void_token_leaves_no_trace(desk: Desk) -> None:
     paused = desk.took("w1")
     hand_back(desk.database, paused, reason="test", now=at(1), wait=timedelta())
     run_job(desk.database, desk.took("w2", seconds=1), MACHINE, clock=lambda: at(2))
-    before = read_job(desk.database, job_id)
+    before = desk.job(job_id), desk.documents(job_id)
     with pytest.raises(leases.Stale):
         run_job(desk.database, paused, MACHINE, clock=lambda: at(3))
-    assert read_job(desk.database, job_id) == before
+    assert (desk.job(job_id), desk.documents(job_id)) == before
     assert desk.recorded() == (1, 1)
     assert desk.history(job_id) == ["queued", "started", "requeued", "started", "succeeded"]
 
@@ -232,4 +227,4 @@ def test_results_are_plain_numbers_even_of_data_without_scatter(desk: Desk) -> N
     def refuse(word: str) -> None:
         raise AssertionError(word)
 
-    json.loads(read_job(desk.database, job_id).result or "", parse_constant=refuse)
+    json.loads(desk.documents(job_id)[1], parse_constant=refuse)

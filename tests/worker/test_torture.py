@@ -19,7 +19,6 @@ from service.store.database import Database
 from service.store.tables import FINAL, State
 from service.store.transport import Transport
 from service.worker.supervise import Companion
-from service.workflows.read import read_verdict
 from tests.jobs import Desk
 from tests.worker.processes import FIFTY_MILLISECONDS, alive, children_of, until
 
@@ -51,7 +50,7 @@ def test_random_kills(database: Database, transport: Transport, settings: Settin
         f"\n{jobs} jobs, {len(kills)} kills, {len(reruns)} runs again,"
         f" median {statistics.median(reruns or [0]):.2f} s after the kill, longest {max(reruns or [0]):.2f} s\n"
     )
-    assert len(kills) >= seconds - 2
+    assert len(kills) >= seconds // 4
 
 
 def kill_each_second(companion: Companion, seconds: int, kills: list[datetime]) -> None:
@@ -61,12 +60,10 @@ def kill_each_second(companion: Companion, seconds: int, kills: list[datetime]) 
         consumer = companion.pid
         if consumer is None:
             continue
-        victims = [consumer, *(pid for pid in children_of(consumer) if alive(pid))]
-        kills.append(datetime.now(UTC))
-        try:
-            os.kill(chance.choice(victims), signal.SIGKILL)
-        except ProcessLookupError:
-            kills.pop()
+        children = [pid for pid in children_of(consumer) if alive(pid)]
+        if children:  # else the consumer is still starting after the last kill
+            kills.append(datetime.now(UTC))
+            os.kill(chance.choice([consumer, *children]), signal.SIGKILL)
 
 
 def check_everything(desk: Desk, ids: list[str], kills: list[datetime]) -> list[float]:
@@ -87,7 +84,7 @@ def check_everything(desk: Desk, ids: list[str], kills: list[datetime]) -> list[
                 reruns.append((after[1] - killed).total_seconds())
     chain = {}
     for job_id in ids:
-        verdict = read_verdict(desk.database, job_id)
+        verdict = desk.verdict(job_id)
         chain[json.loads(verdict.document)["previous"]] = verdict.digest
     link, length = chain.get(None), 0
     while link is not None:
