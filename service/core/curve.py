@@ -131,7 +131,7 @@ def value_at(coefficients: Floats, domain: tuple[float, float], x: Floats | floa
 def slope_range(
     coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]
 ) -> tuple[float, float, float]:
-    """Least and greatest slope dy/dx over the working range, and the x of the least |slope|.
+    """Least and greatest slope dy/dx over the working range, and the x where the curve turns or else is flattest.
 
     The extremes of p' lie at the ends or at real roots of p''; the roots are found, not sampled.
     """
@@ -143,13 +143,20 @@ def slope_range(
     while second.size > 1 and second[-1] == 0:
         second = second[:-1]
     if second.size > 1:
-        roots = chebyshev.chebroots(second)
-        real = roots[np.abs(roots.imag) < 1e-7 * (1 + np.abs(roots.real))].real
-        places += [float(r) for r in real if ends[0] < r < ends[1]]
+        places += _real_roots(second, ends)
     slopes = chebyshev.chebval(np.array(places), first)
-    flattest = int(np.argmin(np.abs(slopes)))
-    at = (lo + hi) / 2 + places[flattest] * (hi - lo) / 2
+    place = places[int(np.argmin(np.abs(slopes)))]
+    if slopes.min() < 0 < slopes.max():
+        place = min(_real_roots(first, ends), key=abs, default=place)
+    at = (lo + hi) / 2 + place * (hi - lo) / 2
     return float(slopes.min()), float(slopes.max()), at
+
+
+def _real_roots(coefficients: Floats, ends: Floats) -> list[float]:
+    """Roots strictly within `ends`, on t."""
+    roots = chebyshev.chebroots(coefficients)
+    real = roots[np.abs(roots.imag) < 1e-7 * (1 + np.abs(roots.real))].real
+    return [float(r) for r in real if ends[0] < r < ends[1]]
 
 
 def is_monotonic(coefficients: Floats, domain: tuple[float, float], working_range: tuple[float, float]) -> bool:
