@@ -15,19 +15,21 @@ from service.store.migrate import migrate
 from service.store.transport import open_transport
 from service.web import problems
 from service.web.context import Context
+from service.web.figures.desk import DrawingDesk
 from service.web.headers import SecurityHeaders
 from service.web.metrics import Measured, Metrics
 from service.web.openapi import describe
+from service.web.pages import install as pages
 from service.web.rates import Rates
 from service.web.requests import RequestIds
-from service.web.routes import batches, datasets, events, jobs, operations, plans, reference, verdicts
+from service.web.routes import batches, datasets, events, figures, jobs, operations, plans, reference, verdicts
 from service.web.schemas.batches import BatchBody, BatchItemView
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.jobs import JobBody
 from service.web.schemas.plans import NamedPlanBody
 from service.web.waiting import Waiting
 
-ROUTES = (datasets, jobs, verdicts, events, batches, plans, operations, reference)
+ROUTES = (datasets, jobs, verdicts, events, figures, batches, plans, operations, reference)
 
 
 def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> FastAPI:
@@ -40,6 +42,7 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
         migrate(database)
         transport = open_transport(settings)
         waiting = Waiting(database, tick=settings.wait_tick_seconds)
+        drawing = DrawingDesk(database, now=now)
         app.state.context = Context(
             settings=settings,
             database=database,
@@ -47,10 +50,12 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
             waiting=waiting,
             rates=Rates(settings.requests_per_minute),
             metrics=metrics,
+            drawing=drawing,
             now=now,
         )
         yield
         await waiting.close()
+        drawing.close()
         transport.close()
         database.close()
 
@@ -71,5 +76,6 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
     for routes in ROUTES:
         app.include_router(routes.router)
     app.mount("/docs/files", reference.ASSETS)
+    pages.install(app)
     describe(app, DatasetBody, JobBody, BatchBody, NamedPlanBody, also=(BatchItemView,))
     return app

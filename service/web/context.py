@@ -10,6 +10,7 @@ from fastapi import Depends, Request
 from service.settings import Settings
 from service.store.database import Database
 from service.store.transport import Transport
+from service.web.figures.desk import DrawingDesk
 from service.web.metrics import Metrics
 from service.web.rates import Rates
 from service.web.waiting import Waiting
@@ -25,6 +26,7 @@ class Context:
     waiting: Waiting
     rates: Rates
     metrics: Metrics
+    drawing: DrawingDesk
     now: Callable[[], datetime]
 
     def page_size(self, limit: int) -> int:

@@ -67,6 +67,7 @@ def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[Bas
             {"name": "verdicts", "description": "The short statements for QA."},
             {"name": "batches", "description": "Many datasets under one plan."},
             {"name": "plans", "description": "Named, versioned plans."},
+            {"name": "figures", "description": "What a job found, drawn."},
             {"name": "operations", "description": "Whether the service runs."},
         ],
         servers=[{"url": "/", "description": "This installation"}],
