@@ -125,7 +125,7 @@ def _step(fits: NestedFits, degree: int, rss: Floats, p: float, *, known: bool) 
     gain = max(float(rss[degree - 1] - rss[degree]), 0.0)
     if known:
         return Test(f=gain, df=dfs, p=p)
-    if fits.rss[degree] <= fits.rounding_rss:
+    if fits.rss[degree] <= fits.rounding_rss or rss[degree] == 0:
         return Test(f=None, df=dfs, p=0.0, reason="the residuals are at the level of rounding")
     return Test(f=gain / (float(rss[degree]) / df), df=dfs, p=p)
 

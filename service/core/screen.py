@@ -99,7 +99,7 @@ def choose_with_screen(fits: NestedFits, *, known_uncertainty: bool, screen: boo
         keep = np.delete(np.arange(current.n), place)
         x = current.x[keep]
         top = min(fits.top, np.unique(x).size - (1 if fits.intercept else 0), x.size - (2 if fits.intercept else 1))
-        if top < 1:
+        if top < 1 or x.min() == x.max():
             break
         aside.append(SetAside(point=int(kept[place]), degree=degree, studentised=value, p_bonferroni=p_bonferroni))
         kept = kept[keep]

@@ -49,11 +49,13 @@ CURVES: tuple[Callable[[Floats, float], Floats], ...] = (
 class Calibration:
     """One simulated dataset. `degree` is None for a curve that is no polynomial, `power` also for degree 0.
 
-    weights: 1/variance where the uncertainties are known, else None. grid, truth: the true curve.
+    weights: 1/variance where the uncertainties are known, else None. values: the true curve at the points; grid, truth:
+    the true curve over the range.
     """
 
     x: Floats
     y: Floats
+    values: Floats
     weights: Floats | None
     degree: int | None
     power: Power | None
@@ -99,6 +101,7 @@ def draw(rng: np.random.Generator) -> Calibration:
     return Calibration(
         x=x[order],
         y=y[order],
+        values=values[order],
         weights=None if weights is None else weights[order],
         degree=degree,
         power=power,
