@@ -17,6 +17,7 @@ from service.store.database import open_database
 from service.store.migrate import migrate
 from service.store.transport import open_transport
 from service.worker.consumer import JobConsumer
+from service.worker.keeper import keep
 from service.worker.process import die_with
 
 EXIT_UNUSABLE = 3
@@ -42,10 +43,9 @@ def work(settings: Settings, *, parent: int | None = None) -> int:
     except psycopg.Error as error:
         logger.error("the queue's database does not answer: %s", error)
         return EXIT_UNUSABLE
+    transport.close()  # each process opens its own
     warm_up()
-    JobConsumer(settings, transport).run()
-    transport.close()
-    return 0
+    return keep(lambda: JobConsumer(settings, transport).run())
 
 
 def warm_up() -> None:

@@ -43,16 +43,20 @@ class Workers:
 
     @property
     def pid(self) -> int:
-        """Of the consumer."""
+        """Of the keeper."""
         assert self.process is not None
         return self.process.pid
 
+    def consumer(self) -> list[int]:
+        """The consumer, if it lives."""
+        return consumer_of(self.pid)
+
     def children(self) -> list[int]:
         """Worker and sweeper processes that live."""
-        return [pid for pid in children_of(self.pid) if alive(pid)]
+        return hands_of(self.pid)
 
     def kill(self) -> None:
-        """kill -9 of the consumer; its children go with it."""
+        """kill -9 of the keeper; consumer and workers go with it."""
         if self.process is not None and self.process.poll() is None:
             self.process.kill()
             self.process.wait()
@@ -70,6 +74,16 @@ def children_of(pid: int) -> list[int]:
         return [int(one) for one in (PROC / f"{pid}/task/{pid}/children").read_text().split()]
     except OSError:
         return []
+
+
+def consumer_of(keeper: int) -> list[int]:
+    """The keeper's consumer, if it lives."""
+    return [pid for pid in children_of(keeper) if alive(pid)]
+
+
+def hands_of(keeper: int) -> list[int]:
+    """Worker and sweeper processes below this keeper that live."""
+    return [pid for consumer in consumer_of(keeper) for pid in children_of(consumer) if alive(pid)]
 
 
 def alive(pid: int) -> bool:

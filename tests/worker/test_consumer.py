@@ -102,7 +102,7 @@ def test_a_worker_stopped_beyond_its_lease_records_nothing_twice(brisk: Desk) ->
     job_id = brisk.put(**LONG_JOB)
     with Workers(brisk.settings) as first:
         until(lambda: running(brisk, job_id))
-        frozen = [*first.children(), first.pid]
+        frozen = [*first.children(), *first.consumer(), first.pid]
         for pid in frozen:
             os.kill(pid, signal.SIGSTOP)
         try:
@@ -136,12 +136,22 @@ def test_work_goes_on_without_a_single_message(brisk: Desk) -> None:
     assert {brisk.job(job_id).state for job_id in ids} == {State.SUCCEEDED}
 
 
-def test_killing_the_consumer_leaves_no_process_behind(brisk: Desk) -> None:
+def test_killing_the_keeper_leaves_no_process_behind(brisk: Desk) -> None:
     with Workers(brisk.settings) as workers:
         until(lambda: len(workers.children()) == 3)
-        children = workers.children()
+        children = [*workers.consumer(), *workers.children()]
         workers.kill()
         until(lambda: not any(alive(pid) for pid in children), seconds=5)
+
+
+def test_a_killed_consumer_takes_its_workers_along_and_is_replaced(brisk: Desk) -> None:
+    with Workers(brisk.settings) as workers:
+        until(lambda: len(workers.children()) == 3)
+        (consumer,), children = workers.consumer(), workers.children()
+        os.kill(consumer, signal.SIGKILL)
+        until(lambda: not any(alive(pid) for pid in children), seconds=5)
+        until(lambda: len(workers.children()) == 3)
+        assert workers.consumer() != [consumer]
 
 
 def test_a_killed_worker_is_replaced_and_its_job_runs_again(brisk: Desk) -> None:
