@@ -17,19 +17,20 @@ from service.web import problems
 from service.web.context import Context
 from service.web.figures.desk import DrawingDesk
 from service.web.headers import SecurityHeaders
+from service.web.methods import HeadIsGet
 from service.web.metrics import Measured, Metrics
 from service.web.openapi import describe
 from service.web.pages import install as pages
 from service.web.rates import Rates
 from service.web.requests import RequestIds
-from service.web.routes import batches, datasets, events, figures, jobs, operations, plans, reference, verdicts
+from service.web.routes import batches, datasets, events, figures, jobs, operations, plans, reference, report, verdicts
 from service.web.schemas.batches import BatchBody, BatchItemView
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.jobs import JobBody
 from service.web.schemas.plans import NamedPlanBody
 from service.web.waiting import Waiting
 
-ROUTES = (datasets, jobs, verdicts, events, figures, batches, plans, operations, reference)
+ROUTES = (datasets, jobs, verdicts, events, figures, report, batches, plans, operations, reference)
 
 
 def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> FastAPI:
@@ -59,9 +60,17 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
         transport.close()
         database.close()
 
-    app = FastAPI(title="Leastbend", version=version("leastbend"), lifespan=lifespan, docs_url=None, redoc_url=None)
+    app = FastAPI(
+        title="Leastbend",
+        version=version("leastbend"),
+        lifespan=lifespan,
+        docs_url=None,
+        redoc_url=None,
+        redirect_slashes=False,
+    )
     problems.install(app)
     # The last added is the outermost.
+    app.add_middleware(HeadIsGet)
     app.add_middleware(Measured, metrics=metrics)
     if settings.allowed_origins:
         app.add_middleware(
@@ -77,5 +86,5 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
         app.include_router(routes.router)
     app.mount("/docs/files", reference.ASSETS)
     pages.install(app)
-    describe(app, DatasetBody, JobBody, BatchBody, NamedPlanBody, also=(BatchItemView,))
+    describe(app, settings, DatasetBody, JobBody, BatchBody, NamedPlanBody, also=(BatchItemView,))
     return app

@@ -12,6 +12,7 @@ from service.store.database import Database
 from service.store.transport import Transport
 from service.web.figures.desk import DrawingDesk
 from service.web.metrics import Metrics
+from service.web.paging import page_size
 from service.web.rates import Rates
 from service.web.waiting import Waiting
 
@@ -29,9 +30,9 @@ class Context:
     drawing: DrawingDesk
     now: Callable[[], datetime]
 
-    def page_size(self, limit: int) -> int:
-        """The size of a page that was asked for, within the installation's limit."""
-        return min(limit, self.settings.page_limit)
+    def page_size(self, limit: int | None) -> int:
+        """The size of a page that was asked for. Raises InvalidInput beyond the installation's limit."""
+        return page_size(limit, self.settings.page_limit)
 
 
 def _context(request: Request) -> Context:

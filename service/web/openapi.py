@@ -13,16 +13,14 @@ from fastapi.openapi.utils import get_openapi
 from pydantic import BaseModel
 from pydantic.json_schema import JsonSchemaMode, models_json_schema
 
+from service.settings import Settings
 from service.store.migrate import resources
+from service.web.openapi_details import add_headers, pairs_as_arrays, state_limits
 from service.web.problems import MEDIA_TYPE
 from service.web.schemas.common import Body, Problem
 
 REFERENCE = "#/components/schemas/{model}"
 METHODS = ("get", "post", "put", "patch", "delete")
-REQUEST_ID = {
-    "description": "Id of this request, also in the log. Yours, if you sent one.",
-    "schema": {"type": "string"},
-}
 ABOUT = """Chooses the least polynomial degree that calibration data can defend, says how much bend could have gone \
 unseen, checks what a statistician would check, and keeps a verdict that can be verified and replayed.
 
@@ -41,18 +39,26 @@ def takes(model: type[Body], *types: str) -> dict[str, Any]:
     return {"requestBody": {"required": True, "content": content}}
 
 
-def describe(app: FastAPI, *bodies: type[Body], also: tuple[type[BaseModel], ...] = ()) -> None:
+def lines_of(model: str) -> dict[str, Any]:
+    """Schema of NDJSON: text whose every line is one `model`."""
+    content = {"$ref": REFERENCE.format(model=model)}
+    return {"type": "string", "contentMediaType": "application/x-ndjson", "contentSchema": content}
+
+
+def describe(app: FastAPI, settings: Settings, *bodies: type[Body], also: tuple[type[BaseModel], ...] = ()) -> None:
     """Give `app` its document, made when first asked for: `bodies` that routes read, `also` lines that they stream."""
 
     def document() -> dict[str, Any]:
         if app.openapi_schema is None:
-            app.openapi_schema = _document(app, bodies, also)
+            app.openapi_schema = _document(app, settings, bodies, also)
         return app.openapi_schema
 
     app.openapi = document  # type: ignore[method-assign]  # FastAPI's documented way
 
 
-def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[BaseModel], ...]) -> dict[str, Any]:
+def _document(
+    app: FastAPI, settings: Settings, bodies: tuple[type[Body], ...], also: tuple[type[BaseModel], ...]
+) -> dict[str, Any]:
     document = get_openapi(
         title=app.title,
         version=app.version,
@@ -60,6 +66,7 @@ def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[Bas
         summary="Chooses and defends the degree of a calibration polynomial",
         description=ABOUT,
         routes=app.routes,
+        contact={"name": "The administrator of this installation"},
         license_info={"name": "Apache 2.0", "identifier": "Apache-2.0"},
         tags=[
             {"name": "datasets", "description": "Calibrations as posted."},
@@ -77,6 +84,8 @@ def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[Bas
     models += [(one, "serialization") for one in also]
     _, extra = models_json_schema(models, ref_template=REFERENCE)
     document["components"]["schemas"] = extra["$defs"] | document["components"]["schemas"]
+    pairs_as_arrays(document)
+    state_limits(document, settings)
     examples = examples_by_operation()
     for item in document["paths"].values():
         for method in METHODS:
@@ -86,11 +95,11 @@ def _document(app: FastAPI, bodies: tuple[type[Body], ...], also: tuple[type[Bas
 
 
 def _complete(operation: dict[str, Any], examples: dict[str, dict[str, Any]]) -> None:
-    for response in operation["responses"].values():
-        response.setdefault("headers", {})["X-Request-Id"] = REQUEST_ID
+    add_headers(operation)
     for case, example in examples.items():
         request, response = example["request"], example["response"]
-        if "body" in request and "requestBody" in operation:
+        # A body that is refused shows with its answer; as an example of the body it would contradict the schema.
+        if "body" in request and "requestBody" in operation and response["status"] < 400:
             content = operation["requestBody"]["content"]
             _add(content[request.get("type", "application/json")], case, request)
         answer = operation["responses"].get(str(response["status"]))

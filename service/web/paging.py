@@ -10,9 +10,19 @@ from fastapi import Query
 from service.errors import InvalidInput
 
 Cursor = Annotated[str | None, Query(description="`next_cursor` of the page before.")]
-Limit = Annotated[int, Query(ge=1, le=200, description="Most items on the page.")]
+Limit = Annotated[int | None, Query(ge=1, description="Most items on the page.")]
+DEFAULT_SIZE = 50
 
 IDENTIFIER = re.compile(r"[0-9a-z-]{1,64}")
+
+
+def page_size(limit: int | None, most: int) -> int:
+    """How many items the page may have. Raises InvalidInput: fewer than were asked for would look like the end."""
+    if limit is None:
+        return min(DEFAULT_SIZE, most)
+    if limit > most:
+        raise InvalidInput.at("/query/limit", f"must be at most {most}")
+    return limit
 
 
 def cursor_of(last: str | None) -> str | None:

@@ -24,6 +24,7 @@ from service.errors import (
     Unauthenticated,
     Unusable,
 )
+from service.web.methods import allowed
 from service.web.strict_json import UnsupportedType, field_errors
 
 STATUS: tuple[tuple[type[LeastbendError], int], ...] = (  # the first that fits
@@ -109,9 +110,15 @@ def _invalid(request: Request, error: Exception) -> Response:
 
 def _http(request: Request, error: Exception) -> Response:
     assert isinstance(error, HTTPException)
-    codes = {404: "not_found", 405: "method_not_allowed"}
+    if error.status_code == 405:
+        allow = {"Allow": allowed(request.app.routes, request.scope)}
+        if request.method == "OPTIONS":
+            return Response(status_code=204, headers=allow)
+        detail = f"{request.method} is not allowed here; allowed: {allow['Allow']}"
+        return problem(request, 405, "method_not_allowed", detail, headers=allow)
+    codes = {404: "not_found"}
     code = codes.get(error.status_code, HTTPStatus(error.status_code).phrase.lower().replace(" ", "_"))
-    details = {404: f"there is nothing at {request.url.path}", 405: f"{request.method} is not allowed here"}
+    details = {404: f"there is nothing at {request.url.path}"}
     detail = details.get(error.status_code, str(error.detail))
     return problem(request, error.status_code, code, detail, headers=dict(error.headers or {}))
 

@@ -85,6 +85,10 @@ STEPS = (
     Step(operation="get_job", case="done", summary="With its result", path={"job_id": "{post_job/queued}"}, work=True),
     Step(operation="get_verdict", case="adequate", summary="An adequate calibration",
          path={"job_id": "{post_job/queued}"}),
+    Step(operation="get_figure_svg", case="curve", summary="Points and curve",
+         path={"job_id": "{post_job/queued}", "name": "curve"}),
+    Step(operation="get_figure_png", case="degrees", summary="Cross-validation error of each degree",
+         path={"job_id": "{post_job/queued}", "name": "degrees"}),
     Step(operation="post_job", case="waited_for", summary="Dataset inline, answered when the job has ended",
          headers={"Prefer": "wait=30"}, body={"dataset": BOWED}, live=True),
     Step(operation="post_job", case="unknown_key", summary="The plan has a key that is not known",
@@ -117,7 +121,7 @@ STEPS = (
          path={"job_id": "{post_job/under_named_plan}"}),
     Step(operation="cancel_job", case="ended", summary="It has ended", path={"job_id": "{post_job/queued}"}),
     Step(operation="post_batch", case="three", summary="Three datasets, one of them bad",
-         body={"datasets": [DATASET, BOWED, {"subject": "SM-XX-00", "x": [1, 2, 3], "y": [1, 2]}], "plan": PLAN}),
+         body={"datasets": [DATASET, BOWED, {"subject": "SM-XX-00", "x": [1, 2, 3, 4], "y": [1, 2, 3]}], "plan": PLAN}),
     Step(operation="post_batch", case="as_ndjson", summary="A dataset a line",
          query={"plan_id": "{post_plan/stored}"}, type="application/x-ndjson",
          body="\n".join(json.dumps(one) for one in (DATASET, BOWED))),
@@ -176,7 +180,9 @@ def answer_of(summary: str, response: httpx.Response) -> dict[str, Any]:
     answer: dict[str, Any] = {"summary": summary, "status": response.status_code}
     answer["headers"] = {name: response.headers[name] for name in HEADERS if name in response.headers}
     kind = response.headers.get("content-type", "").split(";")[0]
-    if response.content:
+    if kind.startswith("image/"):  # tests/web/figures looks at what is drawn
+        answer["type"] = kind
+    elif response.content:
         answer["type"] = kind
         answer["body"] = _body(kind, response.text)
     return answer

@@ -76,12 +76,27 @@ def test_wait_answers_when_the_job_has_ended(service: Service) -> None:
     assert answer.headers["preference-applied"] == "wait=30"
 
 
-@pytest.mark.parametrize("prefer", ["wait=1", 'respond-async, wait="1"', "handling=strict, WAIT = 1; x=y"])
-def test_wait_gives_up_after_the_time_asked_for(service: Service, prefer: str) -> None:
+@pytest.mark.parametrize(
+    ("prefer", "applied"),
+    [
+        ("wait=1", "wait=1"),
+        ('respond-async, wait="1"', "respond-async, wait=1"),
+        ("handling=strict, WAIT = 1; x=y", "wait=1"),
+        ('note="a, wait=30", wait=1, wait=20', "wait=1"),
+    ],
+)
+def test_wait_gives_up_after_the_time_asked_for(service: Service, prefer: str, applied: str) -> None:
     answer = service.http.post("/v1/jobs", json={"dataset": DATASET}, headers={"Prefer": prefer})
     assert answer.status_code == 202
     assert answer.json()["state"] == "queued"
-    assert answer.headers["preference-applied"] == "wait=1"
+    assert answer.headers["preference-applied"] == applied
+
+
+@pytest.mark.parametrize("prefer", ["wait=x", "wait", 'x; wait=30, "wait=30"', "wait=-1", "wait=1.5", 'wait="', ""])
+def test_what_cannot_be_read_of_prefer_is_ignored(service: Service, prefer: str) -> None:
+    answer = service.http.post("/v1/jobs", json={"dataset": DATASET}, headers={"Prefer": prefer})
+    assert answer.status_code == 202
+    assert "preference-applied" not in answer.headers
 
 
 def test_many_wait_at_once_and_the_service_still_answers(service: Service) -> None:

@@ -13,7 +13,7 @@ from service.web.answers import json_response
 from service.web.callers import CallerDep
 from service.web.context import Ctx
 from service.web.idempotency import IdempotencyKey, repeat_key
-from service.web.openapi import takes
+from service.web.openapi import lines_of, takes
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.problems import documented
 from service.web.schemas.batches import (
@@ -86,7 +86,7 @@ def post_batch(
 @router.get(
     "/{batch_id}",
     response_model=BatchView,
-    responses=documented(401, 403, 404, 429, 503),
+    responses=documented(401, 403, 404, 422, 429, 503),
     operation_id="get_batch",
     summary="Read a batch's progress",
 )
@@ -99,11 +99,11 @@ def get_batch(context: Ctx, caller: CallerDep, batch_id: str) -> Response:
     "/{batch_id}/results",
     response_class=StreamingResponse,
     responses=documented(
-        *(401, 403, 404, 429, 503),
+        *(401, 403, 404, 422, 429, 503),
         also={
             200: {
                 "description": "One BatchItemView a line, in the order posted",
-                "content": {NDJSON: {"schema": {"type": "string"}}},
+                "content": {NDJSON: {"schema": lines_of("BatchItemView")}},
             }
         },
     ),
@@ -128,7 +128,7 @@ def get_batch_results(context: Ctx, caller: CallerDep, batch_id: str) -> Respons
     operation_id="list_batches",
     summary="List batches",
 )
-def get_batches(context: Ctx, caller: CallerDep, cursor: Cursor = None, limit: Limit = 50) -> Response:
+def get_batches(context: Ctx, caller: CallerDep, cursor: Cursor = None, limit: Limit = None) -> Response:
     """Batches, newest first."""
     page = list_batches(context.database, caller, before=position(cursor), limit=context.page_size(limit))
     items = [batch_view(one) for one in page.items]

@@ -11,6 +11,7 @@ from service.web.callers import CallerDep
 from service.web.conditional import conditional
 from service.web.context import Ctx
 from service.web.openapi import takes
+from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.posted import CSV, PARQUET, posted_dataset
 from service.web.problems import documented
@@ -51,7 +52,7 @@ def post_dataset(
 @router.get(
     "/{dataset_id}",
     response_model=DatasetView,
-    responses=documented(401, 403, 404, 422, 429, 503),
+    responses=documented(401, 403, 404, 422, 429, 503, also=NOT_MODIFIED),
     operation_id="get_dataset",
     summary="Read a dataset",
 )
@@ -80,7 +81,7 @@ def get_datasets(
     caller: CallerDep,
     subject: Annotated[Label | None, Query(description="Only of this subject.")] = None,
     cursor: Cursor = None,
-    limit: Limit = 50,
+    limit: Limit = None,
 ) -> Response:
     """Datasets without their numbers, newest first."""
     page = list_datasets(

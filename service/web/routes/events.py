@@ -28,7 +28,15 @@ def _exists(context: Ctx, caller: CallerDep, job_id: str) -> Caller:
 @router.get(
     "/{job_id}/events",
     response_class=EventSourceResponse,
-    responses=documented(401, 403, 404, 422, 429, 503),
+    responses=documented(
+        *(401, 403, 404, 422, 429, 503),
+        also={
+            200: {
+                "description": "Events of `event`, `id` and `data`, which is JSON",
+                "content": {"text/event-stream": {"schema": {"type": "string"}}},
+            }
+        },
+    ),
     operation_id="get_job_events",
     summary="Follow a job",
 )

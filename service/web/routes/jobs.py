@@ -15,8 +15,9 @@ from service.web.conditional import conditional
 from service.web.context import Context, Ctx
 from service.web.idempotency import IdempotencyKey, repeat_key
 from service.web.openapi import takes
+from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
-from service.web.prefer import Prefer, seconds_to_wait
+from service.web.prefer import Prefer, applied, preferences, seconds_to_wait
 from service.web.problems import documented
 from service.web.schemas.common import Label, Moment, PageOf
 from service.web.schemas.jobs import JobBody, JobSummary, JobView, StateWord, VerdictWord, job_document, job_summary
@@ -55,7 +56,9 @@ async def post_job(
     With `Prefer: wait=N` (RFC 7240) the answer comes when the job has ended, or after N seconds.
     """
     job_id = await run_in_threadpool(_submit, context, caller, body, repeat_key(key))
-    seconds = seconds_to_wait(request.headers.getlist("prefer"), most=context.settings.wait_seconds)
+    request.state.job_id = job_id  # for the log
+    preferred = preferences(request.headers.getlist("prefer"))
+    seconds = seconds_to_wait(preferred, most=context.settings.wait_seconds)
     if seconds:
         await context.waiting.until_ended(job_id, seconds)
     detail, notification = await run_in_threadpool(read_job, context.database, caller, job_id)
@@ -63,8 +66,9 @@ async def post_job(
     headers = {"Location": f"/v1/jobs/{job_id}"}
     if not ended:
         headers["Retry-After"] = RETRY_AFTER
-    if seconds is not None:
-        headers["Preference-Applied"] = f"wait={seconds:g}"
+    followed = applied(preferred, seconds)
+    if followed is not None:
+        headers["Preference-Applied"] = followed
     status = 200 if ended and seconds is not None else 202
     return document_response(job_document(detail, notification), status, headers)
 
@@ -86,7 +90,7 @@ def _submit(context: Context, caller: Caller, body: JobBody, key: str | None) ->
 @router.get(
     "/{job_id}",
     response_model=JobView,
-    responses=documented(401, 403, 404, 429, 503),
+    responses=documented(401, 403, 404, 422, 429, 503, also=NOT_MODIFIED),
     operation_id="get_job",
     summary="Read a job",
 )
@@ -117,7 +121,7 @@ def get_jobs(
     until: Annotated[Moment | None, Query(description="Queued before this time.")] = None,
     plan: Annotated[Label | None, Query(description="Digest of the plan.")] = None,
     cursor: Cursor = None,
-    limit: Limit = 50,
+    limit: Limit = None,
 ) -> Response:
     """Jobs without their results, newest first."""
     wanted = JobFilter(
@@ -136,7 +140,7 @@ def get_jobs(
 @router.delete(
     "/{job_id}",
     response_model=JobSummary,
-    responses=documented(401, 403, 404, 409, 429, 503),
+    responses=documented(401, 403, 404, 409, 422, 429, 503),
     operation_id="cancel_job",
     summary="Cancel a job",
 )

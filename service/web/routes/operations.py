@@ -1,8 +1,8 @@
 """Liveness, readiness, metrics."""
 
-from typing import Literal
+from typing import Any, Literal
 
-from fastapi import APIRouter
+from fastapi import APIRouter, Depends
 from starlette.responses import Response
 
 from service.errors import Forbidden, Overloaded
@@ -11,9 +11,11 @@ from service.web.answers import json_response
 from service.web.callers import CallerDep
 from service.web.context import Ctx
 from service.web.problems import documented
+from service.web.queries import demand_known_query
 from service.web.schemas.common import Answer
 
 router = APIRouter(tags=["operations"])
+NO_KEY: dict[str, Any] = {"security": []}
 TEXT_FORMAT = "text/plain; version=0.0.4; charset=utf-8"
 
 
@@ -30,7 +32,15 @@ class Readiness(Answer):
     queue_messages: int
 
 
-@router.get("/healthz", response_model=Health, operation_id="get_health", summary="Liveness")
+@router.get(
+    "/healthz",
+    response_model=Health,
+    responses=documented(422),
+    dependencies=[Depends(demand_known_query)],
+    openapi_extra=NO_KEY,
+    operation_id="get_health",
+    summary="Liveness",
+)
 def get_health() -> Response:
     """The process is up. Asks nothing of database or queue, and needs no key."""
     return json_response({"status": "ok"})
@@ -39,7 +49,9 @@ def get_health() -> Response:
 @router.get(
     "/readyz",
     response_model=Readiness,
-    responses=documented(503),
+    responses=documented(422, 503),
+    dependencies=[Depends(demand_known_query)],
+    openapi_extra=NO_KEY,
     operation_id="get_readiness",
     summary="Readiness",
 )
@@ -57,7 +69,8 @@ def get_readiness(context: Ctx) -> Response:
     "/metrics",
     response_class=Response,
     responses=documented(
-        401, 403, 429, 503, also={200: {"description": "Text format 0.0.4", "content": {"text/plain": {}}}}
+        *(401, 403, 422, 429, 503),
+        also={200: {"description": "Text format 0.0.4", "content": {"text/plain": {"schema": {"type": "string"}}}}},
     ),
     operation_id="get_metrics",
     summary="Prometheus metrics",

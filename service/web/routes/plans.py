@@ -10,6 +10,7 @@ from service.web.callers import CallerDep
 from service.web.conditional import conditional
 from service.web.context import Ctx
 from service.web.openapi import takes
+from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.problems import documented
 from service.web.schemas.common import Label, PageOf
@@ -44,7 +45,7 @@ def store_plan(
 @router.get(
     "/{plan_id}",
     response_model=NamedPlanView,
-    responses=documented(401, 403, 404, 429, 503),
+    responses=documented(401, 403, 404, 422, 429, 503, also=NOT_MODIFIED),
     operation_id="get_plan",
     summary="Read a named plan",
 )
@@ -67,7 +68,7 @@ def get_plans(
     name: Annotated[Label | None, Query(description="Only versions of this name.")] = None,
     newest_only: Annotated[bool, Query(description="Only the newest version of each name.")] = False,
     cursor: Cursor = None,
-    limit: Limit = 50,
+    limit: Limit = None,
 ) -> Response:
     """Versions, newest first. Plans are shared by all callers."""
     page = list_plans(

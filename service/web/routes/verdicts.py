@@ -12,6 +12,7 @@ from service.web.answers import document_response
 from service.web.callers import CallerDep
 from service.web.conditional import conditional
 from service.web.context import Ctx
+from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.problems import documented
 from service.web.schemas.common import Label, Moment, PageOf
@@ -24,7 +25,7 @@ router = APIRouter(tags=["verdicts"])
 @router.get(
     "/v1/jobs/{job_id}/verdict",
     response_model=Verdict,
-    responses=documented(401, 403, 404, 429, 503),
+    responses=documented(401, 403, 404, 422, 429, 503, also=NOT_MODIFIED),
     operation_id="get_verdict",
     summary="Read a job's verdict",
 )
@@ -49,7 +50,7 @@ def get_verdicts(
     since: Annotated[Moment | None, Query(description="Issued at this time or later.")] = None,
     newest_only: Annotated[bool, Query(description="Only the newest verdict of each subject.")] = False,
     cursor: Cursor = None,
-    limit: Limit = 50,
+    limit: Limit = None,
 ) -> Response:
     """Oldest first, made for polling: keep `next_cursor`, which is given as long as anything was ever answered, and ask
     again with it later; what has been issued since comes then, nothing twice and nothing left out.

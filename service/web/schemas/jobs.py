@@ -7,6 +7,7 @@ from typing import Annotated, Any, Literal, Self
 from pydantic import Field, model_validator
 
 from service.core.plan import Plan
+from service.core.result import Reason
 from service.store.clock import rfc3339
 from service.store.records import JobDetail, JobRecord, NotificationRecord
 from service.web.schemas.common import Answer, Body, FieldProblem, Label
@@ -95,14 +96,6 @@ class JobView(JobSummary):
     plan: Plan = Field(description="The whole plan, defaults included.")
     notification: Notification | None = Field(description="Where `notify_url` was given.")
     result: JobResult | None
-
-
-class Reason(Answer):
-    """One reason for a verdict."""
-
-    code: str
-    severity: Literal["note", "caution", "serious"]
-    message: str
 
 
 class Verdict(Answer):
