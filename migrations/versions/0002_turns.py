@@ -13,7 +13,7 @@ branch_labels = None
 depends_on = None
 
 WAITING = sa.text("state = 'queued'")
-QUEUE_INDEXES = {
+QUEUE_INDEXES: dict[str, list[str | sa.TextClause]] = {
     "ix_jobs_next": [sa.text("priority DESC"), "turn", "id", "run_after"],
     "ix_jobs_turn": ["turn", "id"],
     "ix_jobs_submitter_turn": ["submitted_by", "priority", "turn"],
