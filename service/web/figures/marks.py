@@ -1,10 +1,11 @@
 """Points of a dataset on a panel: one shape a series, suspects ringed and numbered."""
 
 from matplotlib.axes import Axes
+from matplotlib.patheffects import withStroke
 
 from service.core.observations import Floats
 from service.web.figures.data import FigureData
-from service.web.figures.style import ALARM, COLOURS, MARKERS, MOST_IN_LEGEND, shortened
+from service.web.figures.style import ALARM, COLOURS, MARKERS, MOST_IN_LEGEND, PANEL, shortened
 
 MOST_NUMBERED = 4
 
@@ -63,6 +64,7 @@ def suspects(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
             ha="right" if right else "left",
             color=ALARM,
             fontweight="bold",
+            path_effects=[withStroke(linewidth=2.5, foreground=PANEL)],
             zorder=6,
         )
 

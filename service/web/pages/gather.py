@@ -1,0 +1,76 @@
+"""Everything that the page and the report of one job show, gathered from what the API answers."""
+
+import json
+from dataclasses import dataclass
+from typing import Any
+
+from service.store.clock import rfc3339
+from service.store.tables import FINAL
+from service.web.context import Context
+from service.web.figures.data import figure_data
+from service.web.figures.names import TITLES, FigureName
+from service.web.figures.words import alt_text
+from service.web.pages import words
+from service.web.schemas.datasets import dataset_view
+from service.web.schemas.jobs import job_document
+from service.workflows.callers import Caller
+from service.workflows.figures import figure_inputs
+from service.workflows.read import read_dataset, read_events, read_job, read_verdict
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class FigureItem:
+    """One figure on a page."""
+
+    name: str
+    title: str
+    alt: str
+    reading: str
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class JobPage:
+    """job.html and report.html. `job`: what GET /v1/jobs/{id} answers, from which every number on the page is taken.
+
+    `verdict`: what GET /v1/jobs/{id}/verdict answers, with its digest; both None before there is one. `dataset`: as
+    GET /v1/datasets/{id} answers it without points. `events`: kind, time and detail, oldest first.
+    """
+
+    job: dict[str, Any]
+    dataset: dict[str, Any]
+    verdict: dict[str, Any] | None
+    verdict_digest: str | None
+    events: list[dict[str, Any]]
+    figures: list[FigureItem]
+    ended: bool
+    may_cancel: bool
+
+
+def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureName, ...]) -> JobPage:
+    """One job for `caller`, with the figures named. Raises NotFound."""
+    detail, notification = read_job(context.database, caller, job_id)
+    _, happened = read_events(context.database, caller, job_id)
+    record, _ = read_dataset(context.database, caller, detail.job.dataset_id)
+    figures: list[FigureItem] = []
+    verdict, digest = None, None
+    if detail.result is not None:
+        content, _ = figure_inputs(context.database, caller, job_id)
+        data = figure_data(content, subject=detail.job.subject, plan=detail.plan, result=detail.result)
+        figures = [
+            FigureItem(name=name, title=TITLES[name], alt=alt_text(name, data), reading=words.FIGURES[name])
+            for name in shown
+        ]
+        found = read_verdict(context.database, caller, job_id)
+        verdict, digest = json.loads(found.document), found.digest
+    document = json.loads(job_document(detail, notification))
+    ended = detail.job.state in FINAL
+    return JobPage(
+        job=document,
+        dataset=dataset_view(record),
+        verdict=verdict,
+        verdict_digest=digest,
+        events=[{"kind": one.kind, "at": rfc3339(one.at), "detail": one.detail} for one in happened],
+        figures=figures,
+        ended=ended,
+        may_cancel=not ended and caller.role != "read",
+    )

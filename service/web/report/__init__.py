@@ -1,0 +1,1 @@
+"""The report of one job as PDF: two pages for an ordinary calibration."""
