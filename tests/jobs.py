@@ -22,7 +22,7 @@ from service.workflows.run import take_job
 from service.workflows.submit import Submission, submit_job
 
 START = datetime(2030, 1, 1, tzinfo=UTC)
-MACHINE = Machine(versions={"python": "3"}, blas=[], platform="test")
+MACHINE = Machine(versions={"leastbend": "0"}, blas=[], platform="test")
 
 
 def at(seconds: float) -> datetime:

@@ -12,7 +12,11 @@ from typing import Any
 import rfc8785
 
 # Strings are matched only to be passed over; of numbers, those that end in .0, have an exponent or are long integers.
-ODD = re.compile(r'"(?:[^"\\]|\\.)*"|-?\d+\.0(?![0-9])|-?\d+(?:\.\d+)?e[+-]\d+|(?<![.\d])-?\d{16,}(?![.\de])')
+ODD = re.compile(
+    r'"[^"\\]*+(?:\\.[^"\\]*+)*+"'
+    r"|(?<![\d.])-?\d++(?:\.0(?!\d)|(?:\.\d++)?e[+-]\d+)"
+    r"|(?<![\d.])-?\d{16,}+(?![.e])"
+)
 SURROGATES = "\ud800"
 
 

@@ -4,7 +4,7 @@ import json
 from typing import Any, cast
 
 import numpy as np
-from sqlalchemy import Connection, RowMapping, Select, select
+from sqlalchemy import Connection, RowMapping, Select, bindparam, select
 from sqlalchemy.dialects.postgresql import insert
 
 from service.core.observations import Floats, Observations
@@ -23,6 +23,8 @@ HEAD = (
     datasets.c.summary,
     datasets.c.details,
 )
+
+LOAD = select(datasets).where(datasets.c.id == bindparam("of_id"))
 
 
 def dataset_document(content: DatasetContent) -> bytes:
@@ -93,7 +95,7 @@ def find(connection: Connection, dataset_id: str, *, posted_by: str | None = Non
 
 def load(connection: Connection, dataset_id: str) -> tuple[DatasetContent, str] | None:
     """The whole content of one dataset, exactly as stored, and its digest."""
-    row = connection.execute(select(datasets).where(datasets.c.id == dataset_id)).mappings().first()
+    row = connection.execute(LOAD, {"of_id": dataset_id}).mappings().first()
     if row is None:
         return None
     content = DatasetContent(

@@ -9,10 +9,12 @@ from sqlalchemy import Connection, insert, select
 from service.store.records import EventRecord
 from service.store.tables import job_events
 
+ADD = insert(job_events)
+
 
 def add(connection: Connection, job_id: str, kind: str, now: datetime, **detail: Any) -> None:
     """One event: `queued`, `started`, `requeued`, `succeeded`, `failed` or `cancelled`, with what is known of it."""
-    connection.execute(insert(job_events), {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
+    connection.execute(ADD, {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
 
 
 def of_job(connection: Connection, job_id: str) -> list[tuple[str, datetime, dict[str, Any]]]:

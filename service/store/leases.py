@@ -7,7 +7,8 @@ and is not (paused, cut off) can change nothing any more: its UPDATE finds no ro
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, func, literal, select, update
+from sqlalchemy import Connection, bindparam, func, literal, select, update
+from sqlalchemy.sql.dml import ReturningUpdate
 
 from service.store.clock import new_id
 from service.store.records import Claim, Held
@@ -30,6 +31,36 @@ CLAIMED = (
 )
 
 
+def _claim(*, stalest: bool) -> ReturningUpdate[Any]:
+    first = (
+        select(jobs.c.id)
+        .where(WAITING, jobs.c.run_after <= bindparam("now"))
+        .order_by(*order(stalest=stalest))
+        .limit(1)
+        .with_for_update(skip_locked=True)
+    )
+    return (
+        update(jobs)
+        .where(jobs.c.id == first.scalar_subquery(), WAITING)
+        .values(
+            state=State.RUNNING,
+            token=bindparam("with_token"),
+            worker=bindparam("with_worker"),
+            lease_until=bindparam("until"),
+            started_at=bindparam("now"),
+            attempts=jobs.c.attempts + 1,
+        )
+        .returning(*CLAIMED)
+    )
+
+
+# Built once: building takes as long as running.
+CLAIM = {stalest: _claim(stalest=stalest) for stalest in (False, True)}
+HELD = (jobs.c.id == bindparam("of_id"), jobs.c.token == bindparam("of_token"), jobs.c.state == State.RUNNING)
+SUCCEED = update(jobs).where(*HELD).values(state=State.SUCCEEDED, **RELEASED)
+IS_HELD = select(literal(1)).where(*HELD)
+
+
 class Stale(Exception):
     """The job is no longer held under this token."""
 
@@ -41,27 +72,8 @@ def claim_next(
 
     `stalest` lets turns go before priorities. On PostgreSQL two claims at once skip each other's row.
     """
-    first = (
-        select(jobs.c.id)
-        .where(WAITING, jobs.c.run_after <= now)
-        .order_by(*order(stalest=stalest))
-        .limit(1)
-        .with_for_update(skip_locked=True)
-    )
-    taken = (
-        update(jobs)
-        .where(jobs.c.id == first.scalar_subquery(), WAITING)
-        .values(
-            state=State.RUNNING,
-            token=new_id(),
-            worker=worker,
-            lease_until=lease_until,
-            started_at=now,
-            attempts=jobs.c.attempts + 1,
-        )
-        .returning(*CLAIMED)
-    )
-    row = connection.execute(taken).mappings().first()
+    by = {"with_worker": worker, "with_token": new_id(), "now": now, "until": lease_until}
+    row = connection.execute(CLAIM[stalest], by).mappings().first()
     if row is None:
         return None
     values = dict(row)
@@ -88,8 +100,7 @@ def give_back(connection: Connection, job_id: str, token: str, *, run_after: dat
 
 def is_held(connection: Connection, job_id: str, token: str) -> bool:
     """Whether this token still holds the job."""
-    held = (jobs.c.id == job_id, jobs.c.token == token, jobs.c.state == State.RUNNING)
-    return connection.execute(select(literal(1)).where(*held)).first() is not None
+    return connection.execute(IS_HELD, {"of_id": job_id, "of_token": token}).first() is not None
 
 
 def cancel(connection: Connection, job_id: str, *, now: datetime) -> State | None:
@@ -107,8 +118,9 @@ def cancel(connection: Connection, job_id: str, *, now: datetime) -> State | Non
 
 def succeed(connection: Connection, job_id: str, token: str, *, now: datetime, verdict: str, degree: int) -> None:
     """End with a result, which the caller stores in the same transaction. Raises Stale."""
-    values = {"state": State.SUCCEEDED, "finished_at": now, "verdict": verdict, "chosen_degree": degree, **RELEASED}
-    _held(connection, job_id, token, values)
+    ended = {"finished_at": now, "verdict": verdict, "chosen_degree": degree}
+    if connection.execute(SUCCEED, {"of_id": job_id, "of_token": token, **ended}).rowcount != 1:
+        raise Stale(job_id)
 
 
 def fail(connection: Connection, job_id: str, token: str, *, now: datetime, error: str) -> None:
@@ -136,6 +148,6 @@ def due(connection: Connection, now: datetime) -> int:
 
 
 def _held(connection: Connection, job_id: str, token: str, values: dict[str, Any]) -> None:
-    held = (jobs.c.id == job_id, jobs.c.token == token, jobs.c.state == State.RUNNING)
-    if connection.execute(update(jobs).where(*held).values(**values)).rowcount != 1:
+    ended = update(jobs).where(*HELD).values(**values)
+    if connection.execute(ended, {"of_id": job_id, "of_token": token}).rowcount != 1:
         raise Stale(job_id)

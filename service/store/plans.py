@@ -2,10 +2,12 @@
 
 from datetime import datetime
 
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, bindparam, select
 from sqlalchemy.dialects.postgresql import insert
 
 from service.store.tables import plans
+
+LOAD = select(plans.c.document).where(plans.c.digest == bindparam("of_digest"))
 
 
 def store(connection: Connection, document: bytes, digest: str, now: datetime) -> None:

@@ -11,6 +11,9 @@ from service.store.records import VerdictFilter, VerdictRecord
 from service.store.tables import jobs, results, verdict_chain, verdicts
 
 RECORD = (verdicts.c.sequence, verdicts.c.digest, verdicts.c.document)
+ADD_RESULT, ADD = insert(results), insert(verdicts)
+END = update(verdict_chain).where(verdict_chain.c.id == 1)
+LENGTHEN = END.values(length=verdict_chain.c.length + 1).returning(verdict_chain.c.length, verdict_chain.c.head)
 
 
 def add_result(connection: Connection, job_id: str, *, document: bytes, digest_: str, provenance: bytes) -> None:
@@ -21,7 +24,7 @@ def add_result(connection: Connection, job_id: str, *, document: bytes, digest_:
         "document": document.decode(),
         "provenance": provenance.decode(),
     }
-    connection.execute(insert(results), row)
+    connection.execute(ADD_RESULT, row)
 
 
 def issue(
@@ -37,9 +40,7 @@ def issue(
 
     Call it last in a transaction: on PostgreSQL the chain's row stays locked until the commit.
     """
-    end = update(verdict_chain).where(verdict_chain.c.id == 1)
-    taken = end.values(length=verdict_chain.c.length + 1).returning(verdict_chain.c.length, verdict_chain.c.head)
-    sequence, previous = connection.execute(taken).one()
+    sequence, previous = connection.execute(LENGTHEN).one()
     body = canonical(document(previous))
     row = {
         "sequence": sequence,
@@ -51,8 +52,8 @@ def issue(
         "previous": previous,
         "document": body.decode(),
     }
-    connection.execute(insert(verdicts), row)
-    connection.execute(end.values(head=row["digest"]))
+    connection.execute(ADD, row)
+    connection.execute(END, {"head": row["digest"]})
     return VerdictRecord(sequence=sequence, digest=row["digest"], document=row["document"])
 
 

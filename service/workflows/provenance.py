@@ -28,7 +28,7 @@ def this_machine() -> Machine:
     """Describe this process; call it after the numeric libraries are loaded and their threads are limited."""
     return Machine(
         versions={
-            "leastbend": service_version(),
+            "leastbend": version("leastbend"),
             "python": platform.python_version(),
             **{name: version(name) for name in NUMERIC},
         },
@@ -39,11 +39,6 @@ def this_machine() -> Machine:
         ],
         platform=platform.platform(),
     )
-
-
-def service_version() -> str:
-    """Version of the installed service."""
-    return version("leastbend")
 
 
 def provenance(

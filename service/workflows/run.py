@@ -22,7 +22,7 @@ from service.store.clock import rfc3339
 from service.store.codec import canonical, digest, read_plan, result_document
 from service.store.database import Database
 from service.store.records import Claim
-from service.workflows.provenance import Machine, provenance, service_version
+from service.workflows.provenance import Machine, provenance
 
 LONGEST_PAUSE = timedelta(minutes=5)
 RECORD_AGAIN = 0.5  # s
@@ -91,7 +91,7 @@ def record_result(
             "result_digest": result_digest,
             "previous": previous,
             "issued_at": rfc3339(now),
-            "service_version": service_version(),
+            "service_version": machine.versions["leastbend"],
         }
 
     with database.write() as connection:
