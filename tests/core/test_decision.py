@@ -20,8 +20,8 @@ from service.core.least_bend import (
 from service.core.nested import fit_all
 from service.core.plan import Plan, Resampling
 from service.core.weighting import restricted_log_likelihood
-from tests.core.data import Floats, calibration, close, fixed, noise, run
 from tests.benchmarks.null_size import sizes
+from tests.core.data import Floats, calibration, close, fixed, noise, run
 
 
 def test_spending() -> None:
