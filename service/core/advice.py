@@ -11,7 +11,7 @@ from service.core.nested import fit_all
 from service.core.observations import Floats
 from service.core.result import Advice
 from service.core.tails import t_quantile, z_quantile
-from service.core.unseen import BOUND, TERMS
+from service.core.unseen import TERMS
 
 MOST_REPEATS = 20
 MOST_NEW_LEVELS = 40
@@ -103,10 +103,10 @@ def _expected_ratio(found: Findings, limit: BendLimit, added: Floats) -> float |
     terms = range(degree + 1, min(degree + TERMS, design.top) + 1)
     if not terms:
         return None
-    absolute = found.plan.known_uncertainty
+    absolute, confidence = found.plan.known_uncertainty, found.plan.confidence
     sigma = 1.0 if absolute else float(np.sqrt(fits.rss[degree] / max(1, fits.df(degree))))
     bounds = [
-        sigma * (MEAN_OF_HALF_NORMAL + (z_quantile(BOUND) if absolute else t_quantile(BOUND, design.df(j))))
+        sigma * (MEAN_OF_HALF_NORMAL + (z_quantile(confidence) if absolute else t_quantile(confidence, design.df(j))))
         for j in terms
     ]
     return limit.ratio(design, design.columns(degree), np.array(bounds))

@@ -91,7 +91,9 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
         studentised=t,
         cooks=cooks,
         lack_of_fit=lack_of_fit(observations, full),
-        unseen=unseen_bend(full, degree, working_range, least_slope=least_slope, absolute=known),
+        unseen=unseen_bend(
+            full, degree, working_range, least_slope=least_slope, absolute=known, confidence=plan.confidence
+        ),
         gap_ratios=ratios,
     )
     say("judge", 0, 1)

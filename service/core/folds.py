@@ -13,6 +13,7 @@ from service.core.plan import Resampling
 from service.core.result import FoldRecord
 
 Assignment = npt.NDArray[np.int32]
+MANY = 2000  # points, above which a mask for every fold costs too much, in time or in what a cache would hold
 DIGEST_OF = "SHA-256 of the fold number of each point, repeat by repeat, as little-endian 32-bit integers"
 
 
@@ -98,13 +99,13 @@ def _small_k_fold(n: int, folds: int, repeats: int, seed: int) -> Folds:
 
 def _k_fold(n: int, folds: int, repeats: int, seed: int) -> Folds:
     # membership depends on four numbers only, and a laboratory's datasets share them
-    return _small_k_fold(n, folds, repeats, seed) if n <= 2000 else _small_k_fold.__wrapped__(n, folds, repeats, seed)
+    return _small_k_fold(n, folds, repeats, seed) if n <= MANY else _small_k_fold.__wrapped__(n, folds, repeats, seed)
 
 
 @lru_cache(maxsize=64)
 def _leave_one_out(n: int) -> Folds:
     assignment = np.empty((1, n), dtype=np.int32)
-    if n <= 2000:
+    if n <= MANY:
         for i, (_, held_out) in enumerate(LeaveOneOut().split(np.zeros(n))):
             assignment[0, held_out] = i
     else:  # the same folds, without a million index lists
@@ -114,6 +115,9 @@ def _leave_one_out(n: int) -> Folds:
 
 def _leave_group_out(group: Integers, scheme: str) -> Folds:
     assignment = np.empty((1, group.size), dtype=np.int32)
-    for i, (_, held_out) in enumerate(LeaveOneGroupOut().split(np.zeros(group.size), groups=group)):
-        assignment[0, held_out] = i
+    if group.size <= MANY:
+        for i, (_, held_out) in enumerate(LeaveOneGroupOut().split(np.zeros(group.size), groups=group)):
+            assignment[0, held_out] = i
+    else:  # the same folds: groups in order of their numbers
+        assignment[0] = np.unique(group, return_inverse=True)[1]
     return from_assignment(assignment, scheme=scheme, seed=None, method="sklearn.model_selection.LeaveOneGroupOut")

@@ -72,7 +72,8 @@ class Plan:
     """What to try and what must hold.
 
     `working_range` is in the unit of x and defaults to the range of the data. `known_uncertainty`
-    takes the dataset's u_y as absolute: terms are then judged by z-tests, not by F-tests.
+    takes the dataset's u_y as absolute: terms are then judged by z-tests, not by F-tests. `confidence` is that of
+    the bounds on terms too small to show, and of coverage intervals.
     """
 
     min_degree: int = 1

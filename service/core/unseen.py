@@ -10,9 +10,8 @@ from service.core.result import UnseenBend, UnseenTerm
 from service.core.tails import t_quantile, z_quantile
 
 TERMS = 3
-BOUND = 0.95
 METHOD = (
-    "upper 95 % bound of each of the next terms (orthonormal polynomial), times its largest value in the working "
+    "upper {:g} % bound of each of the next terms (orthonormal polynomial), times its largest value in the working "
     "range; root of the sum of squares"
 )
 
@@ -36,9 +35,19 @@ class Unseen:
 
 
 def unseen_bend(
-    fits: NestedFits, degree: int, working_range: tuple[float, float], *, least_slope: float | None, absolute: bool
+    fits: NestedFits,
+    degree: int,
+    working_range: tuple[float, float],
+    *,
+    least_slope: float | None,
+    absolute: bool,
+    confidence: float = 0.95,
 ) -> Unseen:
-    """Bound the next terms above `degree`. least_slope: smallest |dy/dx| in the range, None if not monotonic."""
+    """Bound the next terms above `degree`. least_slope: smallest |dy/dx| in the range, None if not monotonic.
+
+    absolute: the weights are 1/variance. confidence: of the upper bound of each term, one-sided.
+    """
+    method = METHOD.format(100 * confidence)
     first = fits.columns(degree)
     bounds: list[float] = []
     terms: list[UnseenTerm] = []
@@ -51,7 +60,7 @@ def unseen_bend(
         column = fits.columns(j) - 1
         b, df = float(fits.qty[column]), fits.df(j)
         se = 1.0 if absolute else float(np.sqrt(max(float(fits.rss[j]), fits.rounding_rss) / df))
-        quantile = z_quantile(BOUND) if absolute else t_quantile(BOUND, df)
+        quantile = z_quantile(confidence) if absolute else t_quantile(confidence, df)
         bound = abs(b) + quantile * se
         bounds.append(bound)
         terms.append(
@@ -65,7 +74,7 @@ def unseen_bend(
         )
     if not terms:
         reason = "the data can estimate no term above the chosen degree"
-        bend = UnseenBend(y=None, x=None, in_single_readings=None, terms=(), method=METHOD, reason=reason)
+        bend = UnseenBend(y=None, x=None, in_single_readings=None, terms=(), method=method, reason=reason)
         return Unseen(bend=bend, bounds=np.zeros(0), first_column=first, fits=fits)
     y = float(np.sqrt(sum(t.largest_effect**2 for t in terms)))
     sd = 1.0 if absolute else float(np.sqrt(max(float(fits.rss[degree]), fits.rounding_rss) / fits.df(degree)))
@@ -75,7 +84,7 @@ def unseen_bend(
         x=y / least_slope if least_slope else None,
         in_single_readings=y / single if single > 0 else None,
         terms=tuple(terms),
-        method=METHOD,
+        method=method,
         reason=None if least_slope else "in x it has no bound, since the curve is not monotonic",
     )
     return Unseen(bend=bend, bounds=np.array(bounds), first_column=first, fits=fits)

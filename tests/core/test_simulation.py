@@ -2,11 +2,12 @@
 
 import math
 
+import numpy as np
 import pytest
+from scipy import stats
 
-from service.core.plan import Plan
 from tests.benchmarks import clean, null_size, policy, unseen_coverage
-from tests.core.data import calibration, fixed, run
+from tests.core.data import calibration, close, fixed, run
 
 
 def test_right_and_over_on_a_few_sets() -> None:
@@ -77,11 +78,20 @@ def test_more_readings_shrink_the_unseen_bend() -> None:
     assert many < few / 2
 
 
-def test_unseen_bend_by_hand() -> None:
-    """Root of the sum of squares of |b_j| + t(0.95) s_j, times the peak of each orthonormal polynomial."""
+@pytest.mark.parametrize("confidence", [0.95, 0.99])
+def test_unseen_bend_by_hand(confidence: float) -> None:
+    """Root of the sum of squares of |b_j| + t s_j times the peak of each orthonormal polynomial, from numpy's QR."""
     x, y = calibration(12)
-    found = run(x, y, Plan(weights="equal")).unseen_bend
-    assert found.y is not None
-    assert math.isclose(found.y, math.sqrt(sum(t.largest_effect**2 for t in found.terms)))
-    assert [t.degree for t in found.terms] == [2, 3, 4]
-    assert all(t.upper_bound > abs(t.coefficient) for t in found.terms)
+    found = run(x, y, fixed(1, confidence=confidence)).unseen_bend
+    q, r = np.linalg.qr(np.vander(x, 5, increasing=True))
+    peaks = np.abs(np.vander(np.linspace(1, 10, 201), 5, increasing=True) @ np.linalg.inv(r)).max(axis=0)
+    total = 0.0
+    for j, term in zip((2, 3, 4), found.terms, strict=True):
+        residual = y - q[:, : j + 1] @ (q[:, : j + 1].T @ y)
+        se = math.sqrt(residual @ residual / (11 - j))
+        bound = abs(q[:, j] @ y) + stats.t.ppf(confidence, 11 - j) * se
+        assert (term.degree, close(term.upper_bound, bound, 1e-8)) == (j, True)
+        assert close(term.largest_effect, bound * peaks[j], 1e-7)
+        total += (bound * peaks[j]) ** 2
+    assert close(found.y, math.sqrt(total), 1e-7)
+    assert f"{100 * confidence:g} %" in found.method

@@ -228,7 +228,7 @@ def test_degree_at_limit() -> None:
     few = np.repeat([1.0, 2.0, 4.0, 7.0], 5)
     by_levels = warning(run(few, 20 * np.log(few) + 0.001 * noise(20)), "degree_at_limit")
     assert by_levels is not None
-    assert "the number of levels" in by_levels.message
+    assert "the number of levels and points" in by_levels.message
     # a degree that the plan fixes is not a limit that was run into
     assert warning(run(x, y, fixed(3)), "degree_at_limit") is None
 

@@ -53,7 +53,7 @@ def degree_at_limit(found: Findings) -> Warning | None:
     if found.degree < found.tried.top or found.degree <= found.plan.min_degree:
         return None
     by_plan = found.tried.top == found.plan.max_degree
-    limit = "the plan's max_degree" if by_plan else "the number of levels"
+    limit = "the plan's max_degree" if by_plan else "the number of levels and points"
     action = "Raise max_degree and run again" if by_plan else "Measure at more levels and run again"
     return Warning(
         code="degree_at_limit",
@@ -112,8 +112,8 @@ def noise_at_rounding(found: Findings) -> Warning | None:
         severity="caution",
         message=(
             f"The degree-{found.degree} curve meets every reading to the last digit of the computer. Measured data do "
-            "not do that: these look computed or copied from a curve, and nothing can be said about scatter or "
-            "uncertainty. Post the readings as measured."
+            "not do that: these look computed, copied from a curve, or read too coarsely to scatter at all, and "
+            "nothing can be said about scatter or uncertainty. Post the readings as measured, with every digit."
         ),
         evidence=Evidence(statistic=float(found.full.rss[found.degree]), threshold=found.full.rounding_rss),
         method="residual sum of squares against the rounding of x and y in double precision",

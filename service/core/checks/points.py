@@ -3,6 +3,7 @@
 import numpy as np
 
 from service.core.findings import Findings
+from service.core.nested import GRID
 from service.core.result import Evidence, Warning
 
 OUTLIER = 0.01
@@ -143,10 +144,10 @@ def wide_gap(found: Findings) -> Warning | None:
     above = float(found.gap_ratios[min(found.degree + 1, found.full.top)])
     if max(here, above) <= GAP_CAUTION:
         return None
-    level_x = found.observations.level_x
-    gap = int(np.argmax(np.diff(level_x)))
+    degree = found.degree if here > GAP_CAUTION else min(found.degree + 1, found.full.top)
+    low, high = _widest_freedom(found, degree)
     message = (
-        f"Between x = {level_x[gap]:g} and {level_x[gap + 1]:g} no point holds the curve"
+        f"Between x = {low:g} and {high:g} no point holds the curve"
         + (
             ": there it is less certain than a single reading. "
             if here > GAP_CAUTION
@@ -158,8 +159,15 @@ def wide_gap(found: Findings) -> Warning | None:
         code="wide_gap",
         severity="caution" if here > GAP_CAUTION else "note",
         message=message,
-        evidence=Evidence(
-            statistic=max(here, above), value=float(level_x[gap + 1] - level_x[gap]), threshold=GAP_CAUTION
-        ),
+        evidence=Evidence(statistic=max(here, above), value=high - low, threshold=GAP_CAUTION),
         method=method,
     )
+
+
+def _widest_freedom(found: Findings, degree: int) -> tuple[float, float]:
+    """The levels on both sides of the place where a degree's prediction variance is largest."""
+    fits, level_x = found.full, found.observations.level_x
+    shapes = fits.orthonormal_on_grid()[: fits.columns(degree)]
+    at = np.linspace(*fits.domain, GRID)[int(np.argmax(np.einsum("ij,ij->j", shapes, shapes)))]
+    above = min(max(int(np.searchsorted(level_x, at, side="right")), 1), level_x.size - 1)
+    return float(level_x[above - 1]), float(level_x[above])
