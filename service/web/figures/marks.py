@@ -1,7 +1,6 @@
 """Points of a dataset on a panel: one shape a series, suspects ringed and numbered."""
 
 from matplotlib.axes import Axes
-from matplotlib.patheffects import withStroke
 
 from service.core.observations import Floats
 from service.web.figures.data import FigureData
@@ -64,7 +63,7 @@ def suspects(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
             ha="right" if right else "left",
             color=ALARM,
             fontweight="bold",
-            path_effects=[withStroke(linewidth=2.5, foreground=PANEL)],
+            bbox={"facecolor": PANEL, "edgecolor": "none", "alpha": 0.85, "pad": 0.4},
             zorder=6,
         )
 
