@@ -8,6 +8,7 @@ from service.core.candidates import describe_candidates
 from service.core.check import check
 from service.core.checks.all import all_warnings
 from service.core.choice import choose
+from service.core.criteria import criteria
 from service.core.cross_validation import cross_validate
 from service.core.curve import describe_curve, is_monotonic, slope_range
 from service.core.diagnose import cooks_distance, diagnose
@@ -51,7 +52,8 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     folds = make_folds(observations, plan.resampling)
     held = cross_validate(tried, folds, lambda done, of: say("cross_validate", done, of))
     say("choose", 0, 1)
-    choice = choose(tried, held, plan, weighted.walked)
+    by_criterion = criteria(tried)
+    choice = choose(tried, held, by_criterion, plan, weighted.walked)
     degree = choice.degree
     working_range = _working_range(full.domain, plan.working_range)
     known = plan.known_uncertainty
@@ -102,6 +104,7 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     candidates = describe_candidates(
         tried,
         held,
+        by_criterion,
         plan,
         p_values=choice.walked.p,
         lack_of_fit=found.lack_of_fit,

@@ -5,7 +5,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from service.core.criteria import aicc, bic
+from service.core.criteria import Criteria
 from service.core.cross_validation import HeldOut, leave_one_out_errors
 from service.core.curve import which_monotonic
 from service.core.exact import ExactFit
@@ -22,6 +22,7 @@ NO_CV = CrossValidation(
 def describe_candidates(
     fits: NestedFits,
     held: HeldOut,
+    criteria: Criteria,
     plan: Plan,
     *,
     p_values: Floats,
@@ -36,7 +37,6 @@ def describe_candidates(
         rss[first : first + len(exact.rss_below)] = exact.rss_below
     tss = float(rss[0]) if fits.intercept else fits.tss
     loo = leave_one_out_errors(fits)
-    criteria = (aicc(fits), bic(fits))
     cvs = _cross_validations(held, tss)
     largest = np.abs(fits.residuals / np.sqrt(fits.weights)[:, None]).max(axis=0)
     presses = np.sum(loo * loo, axis=0)
@@ -56,7 +56,7 @@ def describe_candidates(
             r2=1 - press / tss if loo_ok and tss > 0 else None,
             reason=None if loo_ok else "without one of the points this degree cannot be fitted",
         )
-        a, b = (_finite(c[degree]) for c in criteria)
+        a, b = (_finite(c[degree]) for c in (criteria.aicc, criteria.bic))
         out.append(
             Candidate(
                 degree=degree,

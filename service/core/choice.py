@@ -4,6 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from service.core.criteria import Criteria
 from service.core.cross_validation import HeldOut
 from service.core.least_bend import BELOW_ANY_LEVEL, size_under_null, term_p_values, walk_many
 from service.core.nested import NestedFits, fit_all
@@ -43,12 +44,12 @@ def choose_degree(
     return max(choose_with_screen(fits, known_uncertainty=known_uncertainty, screen=screen).degree, min_degree)
 
 
-def choose(fits: NestedFits, held: HeldOut, plan: Plan, walked: Walked | None) -> Choice:
+def choose(fits: NestedFits, held: HeldOut, criteria: Criteria, plan: Plan, walked: Walked | None) -> Choice:
     """Choose under the plan's rule. `walked`: the walk, where the weighting already made it."""
     walked = walked or choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
     least = min(plan.min_degree, fits.top)
     bend = min(max(walked.degree, least), fits.top)
-    rules = [RuleChoice(rule="least_bend", degree=bend), *other_rules(fits, held, least)]
+    rules = [RuleChoice(rule="least_bend", degree=bend), *other_rules(fits, held, criteria, least)]
     chosen = next(r for r in rules if r.rule == plan.rule)
     degree = chosen.degree
     steps = _walk_steps(walked, bend) if plan.rule == "least_bend" else _rule_steps(chosen)

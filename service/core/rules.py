@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from service.core.criteria import aicc, bic
+from service.core.criteria import Criteria
 from service.core.cross_validation import HeldOut
 from service.core.nested import NestedFits
 from service.core.observations import Floats, Integers
@@ -13,7 +13,7 @@ NOT_JUDGED = "no degree can be judged by this rule on these data"
 RELATIVE_TIE = 1e-12  # values closer than this are equal: the lower degree is taken
 
 
-def other_rules(fits: NestedFits, held: HeldOut, min_degree: int) -> list[RuleChoice]:
+def other_rules(fits: NestedFits, held: HeldOut, criteria: Criteria, min_degree: int) -> list[RuleChoice]:
     """What every rule but `least_bend` chooses among degrees min_degree..top."""
     exact = exact_degree(fits, min_degree)
     if exact is not None:
@@ -23,8 +23,8 @@ def other_rules(fits: NestedFits, held: HeldOut, min_degree: int) -> list[RuleCh
     return [
         lowest,
         _one_standard_error(held, min_degree, lowest.degree),
-        _least("aicc", aicc(fits), min_degree),
-        _least("bic", bic(fits), min_degree),
+        _least("aicc", criteria.aicc, min_degree),
+        _least("bic", criteria.bic, min_degree),
     ]
 
 
