@@ -36,7 +36,8 @@ def rules_disagree(found: Findings) -> Warning | None:
         severity=severity,
         message=message,
         evidence=Evidence(value=float(sparing if higher and sparing is not None else max(others.values()))),
-        method="the plan's other rules on the same numbers",
+        method="lowest cross-validated error, one standard error (Breiman et al. 1984), AICc (Hurvich & Tsai 1989) and BIC "
+        "(Schwarz 1978) on the same fits",
     )
 
 
@@ -55,7 +56,7 @@ def unstable_choice(found: Findings) -> Warning | None:
             "to tell these degrees apart. Repeat the run or add levels."
         ),
         evidence=Evidence(statistic=share, value=float(stability.resamples), threshold=UNSTABLE_CAUTION),
-        method=stability.method,
+        method=f"{stability.method} (selection frequency, after Sauerbrei & Schumacher, Stat. Med. 11 (1992) 2093)",
     )
 
 
@@ -77,5 +78,5 @@ def fold_inestimable(found: Findings) -> Warning | None:
         severity="caution" if chosen else "note",
         message=message,
         evidence=Evidence(value=float(chosen), statistic=float(lost.max()), threshold=0.0),
-        method="pivots of I - Q'Q of each fold",
+        method="pivots of I - Q'Q of each fold (Cook & Weisberg 1982, app. A.2)",
     )

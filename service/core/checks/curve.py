@@ -44,7 +44,7 @@ def not_monotonic(found: Findings) -> Warning | None:
         severity="serious" if asked else "note",
         message=message,
         evidence=Evidence(statistic=least, value=greatest, threshold=0.0),
-        method="least and greatest slope over the range, from the real roots of the second derivative",
+        method="least and greatest slope over the range, from the real roots of the second derivative (calculus)",
     )
 
 
@@ -63,7 +63,7 @@ def degree_at_limit(found: Findings) -> Warning | None:
             f"there. {action}; where no low degree suffices, the quantity may not follow a polynomial at all."
         ),
         evidence=Evidence(value=float(found.degree), threshold=float(found.tried.top)),
-        method="comparison with the highest degree tried",
+        method="comparison with the highest degree tried (common practice, no source)",
     )
 
 
@@ -99,7 +99,7 @@ def power_terms_look_insignificant(found: Findings) -> Warning | None:
             "not drop single powers."
         ),
         evidence=Evidence(value=max(v for k, v in enumerate(p) if k in doubtful and v is not None), threshold=0.05),
-        method="t-tests of the power-basis coefficients",
+        method="t-tests of single powers; why not to act on them: Peixoto, Am. Stat. 44 (1990) 26",
     )
 
 
@@ -116,5 +116,5 @@ def noise_at_rounding(found: Findings) -> Warning | None:
             "nothing can be said about scatter or uncertainty. Post the readings as measured, with every digit."
         ),
         evidence=Evidence(statistic=float(found.full.rss[found.degree]), threshold=found.full.rounding_rss),
-        method="residual sum of squares against the rounding of x and y in double precision",
+        method="residual sum of squares against what rounding of x and y to doubles can cause (common practice, no source)",
     )

@@ -117,13 +117,16 @@ def few_spare_points(found: Findings) -> Warning | None:
             "could not be seen. Add levels rather than repeats."
         ),
         evidence=Evidence(value=float(df), statistic=float(spare_levels), threshold=3.0),
-        method="residual degrees of freedom and levels beyond the number of coefficients",
+        method="residual degrees of freedom and levels beyond the number of coefficients (common practice, no source)",
     )
 
 
 def wide_gap(found: Findings) -> Warning | None:
     """A stretch of the range in which no point holds the curve; or a range asked for beyond the points."""
-    method = "root of the largest prediction variance over the range to that of a single reading"
+    method = (
+        "root of the largest prediction variance over the range to that of a single reading (variance function of "
+        "Box & Hunter, Ann. Math. Stat. 28 (1957) 195)"
+    )
     asked = found.plan.working_range
     if asked is not None:
         lo, hi = found.full.domain
@@ -138,7 +141,7 @@ def wide_gap(found: Findings) -> Warning | None:
                     "at the ends."
                 ),
                 evidence=Evidence(value=outside, threshold=OUTSIDE_SHARE * (asked[1] - asked[0])),
-                method="range of the points against the working range",
+                method="range of the points against the working range (common practice, no source)",
             )
     here = float(found.gap_ratios[found.degree])
     above = float(found.gap_ratios[min(found.degree + 1, found.full.top)])
