@@ -36,8 +36,10 @@ def rules_disagree(found: Findings) -> Warning | None:
         severity=severity,
         message=message,
         evidence=Evidence(value=float(sparing if higher and sparing is not None else max(others.values()))),
-        method="lowest cross-validated error, one standard error (Breiman et al. 1984), AICc (Hurvich & Tsai 1989) and BIC "
-        "(Schwarz 1978) on the same fits",
+        method=(
+            "lowest cross-validated error, one standard error (Breiman et al. 1984), AICc (Hurvich & Tsai 1989) and "
+            "BIC (Schwarz 1978) on the same fits"
+        ),
     )
 
 

@@ -116,5 +116,5 @@ def noise_at_rounding(found: Findings) -> Warning | None:
             "nothing can be said about scatter or uncertainty. Post the readings as measured, with every digit."
         ),
         evidence=Evidence(statistic=float(found.full.rss[found.degree]), threshold=found.full.rounding_rss),
-        method="residual sum of squares against what rounding of x and y to doubles can cause (common practice, no source)",
+        method="residual sum of squares against what rounding of x and y can cause (common practice, no source)",
     )
