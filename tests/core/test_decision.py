@@ -272,7 +272,7 @@ def test_restricted_likelihood_by_contrasts() -> None:
 
 
 def test_errors_in_x_enter_by_the_effective_variance() -> None:
-    """A line: u^2 = u_y^2 + slope^2 u_x^2, the slope that of the fit itself (York-type fixed point)."""
+    """A line: u^2 = u_y^2 + slope^2 u_x^2, the slope that of the fit itself."""
     x = np.linspace(1, 10, 12)
     u_x, u_y = np.geomspace(0.01, 0.3, 12), np.full(12, 0.1)
     y = 3 * x + 0.2 * noise(12)
