@@ -4,10 +4,11 @@ import json
 from typing import Any, cast
 
 import numpy as np
-from sqlalchemy import Connection, RowMapping, Select, bindparam, select
+from sqlalchemy import Connection, RowMapping, Select, bindparam, func, select, update
 from sqlalchemy.dialects.postgresql import insert
 
 from service.core.observations import Floats, Observations
+from service.errors import Conflict
 from service.store.clock import new_id
 from service.store.codec import canonical
 from service.store.records import DatasetContent, DatasetRecord, Page
@@ -24,6 +25,9 @@ HEAD = (
     datasets.c.details,
 )
 
+FIND_DIGEST = select(datasets.c.id, func.length(datasets.c.x).label("size")).where(
+    datasets.c.digest == bindparam("of_digest")
+)
 LOAD = select(datasets).where(datasets.c.id == bindparam("of_id"))
 
 
@@ -58,9 +62,15 @@ def store(
     connection: Connection, content: DatasetContent, digest: str, summary: dict[str, Any], now: Any
 ) -> tuple[str, bool]:
     """Id of the dataset with this digest, and whether it is new."""
-    found = connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar()
-    if found is not None:
-        return found, False
+    found = connection.execute(FIND_DIGEST, {"of_digest": digest}).first()
+    if found is not None and found.size > 0:
+        return found.id, False
+    numbers = {name: column.astype(LITTLE_ENDIAN).tobytes() for name, column in columns(content).items()}
+    series = None if content.series is None else json.dumps(content.series)
+    if found is not None:  # retention took its points: here they are again
+        again = {"series": series, "created_at": now, **numbers}
+        connection.execute(update(datasets).where(datasets.c.id == found.id).values(**again))
+        return found.id, False
     row = {
         "id": new_id(),
         "digest": digest,
@@ -69,8 +79,8 @@ def store(
         "points": content.x.size,
         "summary": json.dumps(summary),
         "details": json.dumps(content.details),
-        "series": None if content.series is None else json.dumps(content.series),
-        **{name: column.astype(LITTLE_ENDIAN).tobytes() for name, column in columns(content).items()},
+        "series": series,
+        **numbers,
     }
     # The same statement text serves SQLite, and one of two callers at the same moment finds the other's row.
     statement = insert(datasets).on_conflict_do_nothing(index_elements=["digest"]).returning(datasets.c.id)
@@ -93,11 +103,18 @@ def find(connection: Connection, dataset_id: str, *, posted_by: str | None = Non
     return None if row is None else _record(row)
 
 
-def load(connection: Connection, dataset_id: str) -> tuple[DatasetContent, str] | None:
-    """The whole content of one dataset, exactly as stored, and its digest."""
+def load(connection: Connection, dataset_id: str, *, purged_too: bool = False) -> tuple[DatasetContent, str] | None:
+    """The whole content of one dataset, exactly as stored, and its digest; None if there is no such dataset.
+
+    Raises Conflict if its points were removed by retention, unless `purged_too`: then the columns are empty.
+    """
     row = connection.execute(LOAD, {"of_id": dataset_id}).mappings().first()
     if row is None:
         return None
+    if not row["x"] and not purged_too:
+        raise Conflict(
+            f"the points of dataset {dataset_id} were removed; post the dataset again", code="dataset_purged"
+        )
     content = DatasetContent(
         subject=row["subject"],
         x=_floats(row["x"]),

@@ -55,9 +55,11 @@ def run_job(
 
     While the database is away, recording is tried again for `patience` seconds, then Overloaded is raised.
     """
-    observations, plan, dataset_digest = _load(database, claim)
     try:
+        observations, plan, dataset_digest = _load(database, claim)
         result = analyse(observations, plan, progress=progress)
+    except Overloaded:
+        raise
     except LeastbendError as error:
         reason = describe(error)
         _patiently(lambda: fail_job(database, claim, error=reason, now=clock()), patience)
