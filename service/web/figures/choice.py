@@ -29,9 +29,10 @@ def degrees(data: FigureData) -> Figure:
     else:
         _errors(above, data, tried)
     _choices(below, data)
+    margin = 0.5 if len(every) > 2 else 1.5
     for panel in (above, below):
         if panel is below or tried:
-            panel.set_xlim(min(every) - 0.5, max(every) + 0.5)
+            panel.set_xlim(min(every) - margin, max(every) + margin)
             panel.set_xticks(every)
             panel.axvspan(data.degree - 0.32, data.degree + 0.32, color=BAND, alpha=0.6, linewidth=0, zorder=0)
     unit = f" ({data.y_unit})" if data.y_unit else ""

@@ -23,7 +23,8 @@ def _curve(data: FigureData) -> str:
     )
     return (
         f"{data.x.size} points of {data.y_label} against {data.x_label} from {lo:.6g} to {hi:.6g}, and the chosen curve"
-        f" of degree {data.degree}.{band} Below, the residuals: the largest is {_largest(data)}.{_suspects(data)}"
+        f" of degree {data.degree}.{band} Below, the residuals: the largest is {_largest(data)}."
+        f"{_suspects(data)}{_thinned(data)}"
     )
 
 
@@ -113,6 +114,12 @@ def _series(data: FigureData) -> str:
     if len(names) > 8:
         return f" {len(names)} series are told apart by shape."
     return f" Series, told apart by shape: {', '.join(names)}."
+
+
+def _thinned(data: FigureData) -> str:
+    if data.drawn.size == data.x.size:
+        return ""
+    return f" Drawn are {data.drawn.size} of the points: those farthest from the curve, and an even choice of the rest."
 
 
 def _suspects(data: FigureData) -> str:

@@ -5,7 +5,6 @@ from dataclasses import dataclass, field
 from fastapi import APIRouter, Request
 from pydantic import ConfigDict, Field
 from starlette.concurrency import run_in_threadpool
-from starlette.datastructures import FormData, UploadFile
 from starlette.responses import RedirectResponse, Response
 
 from service.core.plan import Plan, Weights
@@ -84,7 +83,8 @@ async def post(request: Request, context: Ctx, visitor: VisitorDep) -> Response:
     sent = await read_form(request, visitor.secret)
     given = {name: str(sent.get(name) or "").strip() for name in FIELDS}
     try:
-        body = await _table(sent)
+        file = sent.get("file")
+        body = file if isinstance(file, bytes) else given["table"].encode()
         job_id = await run_in_threadpool(_submit, context, visitor.caller, given, body)
     except (InvalidInput, TooLarge) as error:
         errors = error.errors if isinstance(error, InvalidInput) else (FieldError("", error.message),)
@@ -109,14 +109,6 @@ def _submit(context: Context, caller: Caller, given: dict[str, str], body: bytes
         repeat_key=None,
         now=context.now(),
     )
-
-
-async def _table(sent: FormData) -> bytes:
-    """The file if one was chosen, else what was pasted."""
-    file = sent.get("file")
-    if isinstance(file, UploadFile) and file.filename:
-        return await file.read()
-    return str(sent.get("table") or "").encode()
 
 
 def _content(said: TryBody, body: bytes) -> DatasetContent:

@@ -12,7 +12,6 @@ from typing import Annotated
 from urllib.parse import urlsplit
 
 from fastapi import Depends, Request
-from starlette.datastructures import FormData
 from starlette.responses import Response
 
 from service.errors import Forbidden, RateLimited
@@ -85,19 +84,36 @@ def with_session_cookie(request: Request, token: str, response: Response) -> Res
     return response
 
 
-async def read_form(request: Request, secret: str) -> FormData:
-    """A form that one of our pages sent: of bounded size, from the same origin, with its token. Raises Forbidden."""
+Sent = dict[str, str | bytes]
+"""Fields of a form by name; the bytes of a file, where one was chosen."""
+
+
+async def read_form(request: Request, secret: str) -> Sent:
+    """A form that one of our pages sent: of bounded size, from the same origin, with its token.
+
+    Raises Forbidden, TooLarge, InvalidInput.
+    """
     demand_type(request, *FORMS)
     origin = request.headers.get("origin")
     if origin is not None and urlsplit(origin).netloc != request.headers.get("host"):
         raise Forbidden("the form was sent from another site", code="foreign_origin")
-    body = await read_body(request)
+    sent = await _fields(request, await read_body(request))
+    given, expected = sent.get("form_token"), token_of(secret)
+    if not (expected and isinstance(given, str) and hmac.compare_digest(given.encode(), expected.encode())):
+        raise Forbidden("the form is out of date; load the page again and send it once more", code="stale_form")
+    return sent
 
+
+async def _fields(request: Request, body: bytes) -> Sent:
     async def once() -> dict[str, object]:
         return {"type": "http.request", "body": body, "more_body": False}
 
-    form = await Request(request.scope, once).form(max_files=1, max_fields=MOST_FIELDS, max_part_size=len(body) + 1)
-    given, expected = form.get("form_token"), token_of(secret)
-    if not (expected and isinstance(given, str) and hmac.compare_digest(given.encode(), expected.encode())):
-        raise Forbidden("the form is out of date; load the page again and send it once more", code="stale_form")
-    return form
+    sent: Sent = {}
+    reading = Request(request.scope, once)
+    async with reading.form(max_files=1, max_fields=MOST_FIELDS, max_part_size=len(body) + 1) as form:
+        for name, value in form.items():
+            if isinstance(value, str):
+                sent[name] = value
+            elif value.filename:
+                sent[name] = await value.read()
+    return sent

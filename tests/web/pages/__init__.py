@@ -1,0 +1,1 @@
+"""Pages and report without a browser."""
