@@ -6,9 +6,8 @@ Every field is also an environment variable with the prefix LEASTBEND_ (LEASTBEN
 import json
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Self
 
-from pydantic import Field, model_validator
+from pydantic import Field, field_validator
 from pydantic_settings import BaseSettings, SettingsConfigDict
 
 PREFIX = "LEASTBEND_"
@@ -57,13 +56,19 @@ class Settings(BaseSettings):
     sweep_seconds: int = Field(1, ge=1, le=30, description="How often lost messages and lost workers are looked for.")
     stop_seconds: float = Field(20.0, ge=0, description="Time that a running job gets to finish at a graceful stop.")
 
-    @model_validator(mode="after")
-    def _database_is_known(self) -> Self:
-        if self.database_url is not None and not self.database_url.startswith("postgresql+psycopg://"):
-            raise ValueError("database_url must start with postgresql+psycopg:// (leave it out for SQLite)")
-        if 60 % self.sweep_seconds:
-            raise ValueError("sweep_seconds must divide 60")
-        return self
+    @field_validator("database_url")
+    @classmethod
+    def _is_postgres(cls, value: str | None) -> str | None:
+        if value is not None and not value.startswith("postgresql+psycopg://"):
+            raise ValueError("must start with postgresql+psycopg:// (leave it out for SQLite)")
+        return value
+
+    @field_validator("sweep_seconds")
+    @classmethod
+    def _divides_a_minute(cls, value: int) -> int:
+        if 60 % value:
+            raise ValueError("must divide 60")
+        return value
 
     @property
     def postgres(self) -> bool:
