@@ -16,7 +16,7 @@ import psycopg
 URL_VARIABLE = "LEASTBEND_TEST_DATABASE_URL"
 PLACES = "/usr/lib/postgresql"
 CONFIGURATION = """
-listen_addresses = '127.0.0.1'
+listen_addresses = '{listen}'
 unix_socket_directories = '{directory}'
 port = {port}
 max_connections = 200
@@ -36,10 +36,10 @@ def find_binaries() -> Path | None:
 class PrivatePostgres:
     """One instance in a temporary directory. It never runs as root, which PostgreSQL refuses."""
 
-    def __init__(self, binaries: Path, *, fsync: bool = False, host: str = "127.0.0.1") -> None:
+    def __init__(self, binaries: Path, *, fsync: bool = False, hosts: tuple[str, ...] = ()) -> None:
+        """`hosts`: further addresses of this machine to listen on; whoever reaches them is let in."""
         self.directory = Path(tempfile.mkdtemp(prefix="leastbend-postgres-"))
         self.port = _free_port()
-        self.host = host
         self._binaries = binaries
         self._process: subprocess.Popen[bytes] | None = None
         self._user: dict[str, Any] = {}
@@ -49,17 +49,24 @@ class PrivatePostgres:
             self._user = {"user": person.pw_uid, "group": person.pw_gid, "extra_groups": []}
         command = [binaries / "initdb", "-D", self._data, "-U", "leastbend", "-A", "trust", "-E", "UTF8", "--no-sync"]
         subprocess.run(command, check=True, stdout=subprocess.DEVNULL, cwd="/", **self._user)
-        text = CONFIGURATION.format(directory=self.directory, port=self.port, fsync="on" if fsync else "off")
+        text = CONFIGURATION.format(
+            directory=self.directory,
+            port=self.port,
+            fsync="on" if fsync else "off",
+            listen=",".join(["127.0.0.1", *hosts]),
+        )
         with (self._data / "postgresql.conf").open("a") as file:
             file.write(text)
+        with (self._data / "pg_hba.conf").open("a") as file:
+            file.writelines(f"host all all {host}/24 trust\n" for host in hosts)
 
     @property
     def _data(self) -> Path:
         return self.directory / "data"
 
-    def url(self, name: str = "postgres") -> str:
+    def url(self, name: str = "postgres", *, host: str = "127.0.0.1") -> str:
         """SQLAlchemy URL of one of its databases."""
-        return f"postgresql+psycopg://leastbend@{self.host}:{self.port}/{name}"
+        return f"postgresql+psycopg://leastbend@{host}:{self.port}/{name}"
 
     def start(self) -> None:
         """Start and wait until it answers."""

@@ -1,11 +1,11 @@
 """Engines and the one transaction scope: `with database.write() as connection:` commits at its end or not at all.
 
-SQLite has one writer at a time, so writers share one connection and start with BEGIN IMMEDIATE: waiting happens in
-the pool and in the busy handler, never as a failed upgrade of a read lock. Readers have their own connections.
+SQLite has one writer at a time, so writers share one connection, wait in line at one lock file and start with BEGIN
+IMMEDIATE: a read lock is never upgraded, which could fail at once. Readers have their own connections and do not wait.
 """
 
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, nullcontext
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -16,6 +16,7 @@ from sqlalchemy.exc import TimeoutError as PoolTimeout
 
 from service.errors import Overloaded, Unusable
 from service.settings import Settings
+from service.store.write_lock import Busy, WriteLock
 
 BUSY_SECONDS = 30
 # Either side notices within some ten seconds that the other was cut off, and a client that stopped in the middle of a
@@ -53,6 +54,7 @@ class Database:
 
     reader: Engine
     writer: Engine
+    lock: WriteLock | None = None
 
     @contextmanager
     def read(self) -> Iterator[Connection]:
@@ -63,8 +65,9 @@ class Database:
     @contextmanager
     def write(self) -> Iterator[Connection]:
         """A transaction that may write; commits at the end, rolls back on any error."""
-        with _translated(), self.writer.begin() as connection:
-            yield connection
+        with _translated(), nullcontext() if self.lock is None else self.lock.held():
+            with self.writer.begin() as connection:
+                yield connection
 
     @property
     def postgres(self) -> bool:
@@ -75,10 +78,12 @@ class Database:
         """Give back every connection."""
         self.reader.dispose()
         self.writer.dispose()
+        if self.lock is not None:
+            self.lock.close()
 
 
 def open_database(settings: Settings, *, durable: bool) -> Database:
-    """Connect lazily. `durable`: a commit survives a power failure (SQLite synchronous=FULL, PostgreSQL
+    """Connections are made when first used. `durable`: a commit survives a power failure (SQLite synchronous=FULL, PostgreSQL
     synchronous_commit=on).
 
     Workers pass False: a claim or finish lost to a power failure only runs the job again.
@@ -98,6 +103,7 @@ def open_database(settings: Settings, *, durable: bool) -> Database:
     return Database(
         reader=_sqlite(path, begin="BEGIN", synchronous=synchronous, connections=READERS),
         writer=_sqlite(path, begin="BEGIN IMMEDIATE", synchronous=synchronous, connections=1),
+        lock=_lock(path.with_suffix(".lock")),
     )
 
 
@@ -117,6 +123,13 @@ def prepare_directory(directory: Path) -> Path:
     except OSError as error:
         raise Unusable(f"cannot make the data directory {directory}: {error.strerror}") from error
     return directory.absolute()
+
+
+def _lock(path: Path) -> WriteLock:
+    try:
+        return WriteLock(path, seconds=BUSY_SECONDS)
+    except OSError as error:
+        raise Unusable(f"cannot write in the data directory {path.parent}: {error.strerror}") from error
 
 
 def _sqlite(path: Path, *, begin: str, synchronous: str, connections: int) -> Engine:
@@ -146,7 +159,7 @@ def _translated() -> Iterator[None]:
     """A database that is busy, full or away is no fault of the caller: say so, and that a retry may help."""
     try:
         yield
-    except PoolTimeout as error:
+    except (PoolTimeout, Busy) as error:
         raise Overloaded("the database is busy", retry_after=1, code="database_busy") from error
     except DBAPIError as error:
         text = str(error.orig).lower()

@@ -24,7 +24,8 @@ class Workers:
 
     def __init__(self, settings: Settings, *, module: str = "service.worker", prefix: tuple[str, ...] = ()) -> None:
         self._settings = settings
-        self._command = [*prefix, sys.executable, "-m", module, "--parent", str(os.getpid())]
+        watched = [] if prefix else ["--parent", str(os.getpid())]  # a prefix may put a process in between
+        self._command = [*prefix, sys.executable, "-m", module, *watched]
         self.process: subprocess.Popen[bytes] | None = None
 
     def __enter__(self) -> Self:
