@@ -22,22 +22,24 @@ def worker_name() -> str:
 
 def is_gone(worker: str) -> bool:
     """Whether the worker of this name surely runs no more. Of another host's worker nothing is known: False."""
-    try:
-        _, tag, pid, started = worker.rsplit("/", 3)
-        number = int(pid)
-    except ValueError:
-        return False
-    if tag != host_tag() or started == "-":
-        return False
-    return _started(number) != started
+    known = _known(worker)
+    return known is not None and _started(known[0]) != known[1]
 
 
 def end(worker: str) -> None:
     """Kill the worker of this name, if it is a process of this host that still lives."""
-    _, tag, pid, _ = worker.rsplit("/", 3) if worker.count("/") >= 3 else ("", "", "", "")
-    if tag == host_tag() and not is_gone(worker):
+    known = _known(worker)
+    if known is not None and _started(known[0]) == known[1]:
         with contextlib.suppress(OSError):
-            os.kill(int(pid), signal.SIGKILL)
+            os.kill(known[0], signal.SIGKILL)
+
+
+def _known(worker: str) -> tuple[int, str] | None:
+    """Process id and start of a worker of this host; None of any other."""
+    parts = worker.rsplit("/", 3)
+    if len(parts) != 4 or parts[1] != host_tag() or not (parts[2].isdecimal() and parts[3].isdecimal()):
+        return None
+    return int(parts[2]), parts[3]
 
 
 @functools.lru_cache(maxsize=1)
