@@ -64,6 +64,7 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
         title="Leastbend",
         version=version("leastbend"),
         lifespan=lifespan,
+        openapi_url=None,  # service.web.routes.reference serves both
         docs_url=None,
         redoc_url=None,
         redirect_slashes=False,

@@ -14,7 +14,9 @@ IdempotencyKey = Annotated[
     str | None,
     Header(
         alias="Idempotency-Key",
-        description="Makes a retry safe: the same key and body within 24 hours make nothing new.",
+        description="Makes a retry safe: the same key and body within 24 hours make nothing new. 1 to 255 printable"
+        " ASCII characters without comma, perhaps in double quotes (then also with comma and space).",
+        json_schema_extra={"pattern": rf"^({QUOTED.pattern}|{BARE.pattern})$"},
     ),
 ]
 

@@ -15,7 +15,7 @@ from pydantic.json_schema import JsonSchemaMode, models_json_schema
 
 from service.settings import Settings
 from service.store.migrate import resources
-from service.web.openapi_details import add_headers, pairs_as_arrays, state_limits
+from service.web.openapi_details import add_headers, pairs_as_arrays, parameters_are_text, state_limits
 from service.web.problems import MEDIA_TYPE
 from service.web.schemas.common import Body, Problem
 
@@ -35,7 +35,7 @@ def takes(model: type[Body], *types: str) -> dict[str, Any]:
     """`openapi_extra` of an operation that reads `model` as JSON, and perhaps other types that say the same."""
     content: dict[str, Any] = {"application/json": {"schema": {"$ref": REFERENCE.format(model=model.__name__)}}}
     for one in types:
-        content[one] = {"schema": {"type": "string", "format": "binary"}}
+        content[one] = {"schema": {"type": "string", "format": "binary", "minLength": 1}}
     return {"requestBody": {"required": True, "content": content}}
 
 
@@ -85,16 +85,17 @@ def _document(
     _, extra = models_json_schema(models, ref_template=REFERENCE)
     document["components"]["schemas"] = extra["$defs"] | document["components"]["schemas"]
     pairs_as_arrays(document)
-    state_limits(document, settings)
     examples = examples_by_operation()
     for item in document["paths"].values():
         for method in METHODS:
             if method in item:
                 _complete(item[method], examples.get(item[method]["operationId"], {}))
+    state_limits(document, settings)
     return document
 
 
 def _complete(operation: dict[str, Any], examples: dict[str, dict[str, Any]]) -> None:
+    parameters_are_text(operation)
     add_headers(operation)
     for case, example in examples.items():
         request, response = example["request"], example["response"]

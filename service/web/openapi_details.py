@@ -68,6 +68,16 @@ def pairs_as_arrays(schema: Any) -> None:
             pairs_as_arrays(one)
 
 
+def parameters_are_text(operation: Json) -> None:
+    """A query or header cannot be null: it is there or not. FastAPI writes null for what may be absent."""
+    for parameter in operation.get("parameters", ()):
+        schema = parameter["schema"]
+        kinds = [one for one in schema.get("anyOf", ()) if one != {"type": "null"}]
+        if len(kinds) == 1:
+            del schema["anyOf"]
+            schema |= kinds[0]
+
+
 def state_limits(document: Json, settings: Settings) -> None:
     """The limits of this installation, in words and where a schema can hold them."""
     document["info"]["description"] += "\n\n" + limits_in_words(settings)

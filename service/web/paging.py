@@ -9,7 +9,9 @@ from fastapi import Query
 
 from service.errors import InvalidInput
 
-Cursor = Annotated[str | None, Query(description="`next_cursor` of the page before.")]
+Cursor = Annotated[
+    str | None, Query(description="`next_cursor` of the page before.", max_length=100, pattern=r"^[A-Za-z0-9_-]+$")
+]
 Limit = Annotated[int | None, Query(ge=1, description="Most items on the page.")]
 DEFAULT_SIZE = 50
 

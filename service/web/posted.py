@@ -10,10 +10,11 @@ from service.errors import FieldError, InvalidInput
 from service.store.clock import rfc3339
 from service.store.records import DatasetContent
 from service.web.context import Ctx
+from service.web.parquet import read_parquet
 from service.web.schemas.common import Body, Finite, Label, Line, Moment, given
 from service.web.schemas.datasets import DETAILS, DatasetBody
 from service.web.strict_json import demand_type, read_as, read_body
-from service.web.tables import read_csv, read_parquet
+from service.web.tables import read_csv
 
 JSON, CSV, PARQUET = "application/json", "text/csv", "application/vnd.apache.parquet"
 

@@ -18,6 +18,7 @@ B = TypeVar("B", bound=Body)
 
 LARGE = 64 * 1024  # parsed in a thread, so that the event loop goes on
 MOST_ERRORS = 20
+LONGEST_KEY = 200  # shown in a pointer
 
 
 class UnsupportedType(InvalidInput):
@@ -92,8 +93,14 @@ def demand_type(request: Request, *types: str) -> str:
 
 
 async def read_body(request: Request) -> bytes:
-    """The whole body, of which no more than the limit is ever read. Raises TooLarge."""
+    """The whole body, of which no more than the limit is ever read. Raises TooLarge, UnsupportedType."""
     limit = request.app.state.context.settings.body_bytes
+    coding = request.headers.get("content-encoding", "identity").strip().lower()
+    if coding != "identity":  # a small body that unpacks to a large one is not taken at all
+        raise UnsupportedType.at("/header/content-encoding", "must be absent: bodies are taken uncompressed only")
+    stated = request.headers.get("content-length", "")
+    if stated.isdecimal() and len(stated) < 20 and int(stated) > limit:
+        raise TooLarge(f"the body is larger than {limit} bytes, the most that is taken")
     chunks, size = [], 0
     async for chunk in request.stream():
         size += len(chunk)
@@ -109,8 +116,8 @@ def field_errors(found: Sequence[Any], *, strip: int = 0) -> list[FieldError]:
 
 
 def pointer(location: Sequence[Any]) -> str:
-    """RFC 6901."""
-    return "".join("/" + str(part).replace("~", "~0").replace("/", "~1") for part in location)
+    """RFC 6901; a key that nobody could mean is cut short."""
+    return "".join("/" + str(part)[:LONGEST_KEY].replace("~", "~0").replace("/", "~1") for part in location)
 
 
 def _words(error: Any) -> str:

@@ -147,7 +147,7 @@ def test_pages_neither_skip_nor_repeat_while_jobs_come_in(service: Service) -> N
 
 def test_what_the_core_refuses_fails_the_job_with_the_reason(service: Service) -> None:
     """Only the fit shows that these x are too close for a cubic."""
-    close = DATASET | {"x": [0, 1e-140, 2e-140, 3e-140, 1, 1, 1, 1]}
+    close = DATASET | {"x": [0, 1e-10, 2e-10, 3e-10, 1, 1, 1, 1]}
     job = post(service, dataset=close, plan={"min_degree": 3})
     service.work()
     with Client(service.address) as client:

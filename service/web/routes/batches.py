@@ -24,7 +24,7 @@ from service.web.schemas.batches import (
     batch_view,
     datasets_of,
 )
-from service.web.schemas.common import Label, PageOf
+from service.web.schemas.common import Identifier, Label, PageOf
 from service.web.schemas.jobs import Priority
 from service.web.strict_json import demand_type, parse_json, read_body, read_value
 from service.workflows.batches import batch_results, list_batches, read_batch, submit_batch
@@ -90,7 +90,7 @@ def post_batch(
     operation_id="get_batch",
     summary="Read a batch's progress",
 )
-def get_batch(context: Ctx, caller: CallerDep, batch_id: str) -> Response:
+def get_batch(context: Ctx, caller: CallerDep, batch_id: Identifier) -> Response:
     """How many of its jobs are where."""
     return json_response(batch_view(read_batch(context.database, caller, batch_id)))
 
@@ -110,7 +110,7 @@ def get_batch(context: Ctx, caller: CallerDep, batch_id: str) -> Response:
     operation_id="get_batch_results",
     summary="Read a batch's results",
 )
-def get_batch_results(context: Ctx, caller: CallerDep, batch_id: str) -> Response:
+def get_batch_results(context: Ctx, caller: CallerDep, batch_id: Identifier) -> Response:
     """NDJSON, one item a line: the job's state and, once it has one, its result; or why the dataset was refused."""
     read_batch(context.database, caller, batch_id)
 

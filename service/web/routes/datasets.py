@@ -15,7 +15,7 @@ from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.posted import CSV, PARQUET, posted_dataset
 from service.web.problems import documented
-from service.web.schemas.common import Label, PageOf
+from service.web.schemas.common import Identifier, Label, PageOf
 from service.web.schemas.datasets import DatasetBody, DatasetView, dataset_view
 from service.workflows.read import list_datasets, read_dataset
 from service.workflows.submit import post_dataset as store_dataset
@@ -60,7 +60,7 @@ def get_dataset(
     request: Request,
     context: Ctx,
     caller: CallerDep,
-    dataset_id: str,
+    dataset_id: Identifier,
     include: Annotated[Literal["points"] | None, Query(description="`points` for the numbers.")] = None,
 ) -> Response:
     """What is known of a dataset, and its numbers if asked."""

@@ -13,13 +13,26 @@ from service.store.tables import FINAL
 from service.web.callers import CallerDep
 from service.web.context import Ctx
 from service.web.problems import documented
+from service.web.schemas.common import Identifier
 from service.workflows.callers import Caller
 from service.workflows.read import read_events
 
 router = APIRouter(prefix="/v1/jobs", tags=["jobs"])
+EVENT = {
+    "type": "object",
+    "properties": {
+        "event": {
+            "type": "string",
+            "enum": ["queued", "started", "requeued", "succeeded", "failed", "cancelled", "progress"],
+        },
+        "id": {"type": "string", "description": "Send it as Last-Event-ID to go on behind it; `progress` has none."},
+        "data": {"type": "string", "contentMediaType": "application/json"},
+    },
+    "required": ["event", "data"],
+}
 
 
-def _exists(context: Ctx, caller: CallerDep, job_id: str) -> Caller:
+def _exists(context: Ctx, caller: CallerDep, job_id: Identifier) -> Caller:
     """Refuses before the stream begins, while there can still be a status."""
     read_events(context.database, caller, job_id)
     return caller
@@ -32,8 +45,8 @@ def _exists(context: Ctx, caller: CallerDep, job_id: str) -> Caller:
         *(401, 403, 404, 422, 429, 503),
         also={
             200: {
-                "description": "Events of `event`, `id` and `data`, which is JSON",
-                "content": {"text/event-stream": {"schema": {"type": "string"}}},
+                "description": "One event after the other; the schema is that of one",
+                "content": {"text/event-stream": {"schema": EVENT}},
             }
         },
     ),
@@ -42,7 +55,7 @@ def _exists(context: Ctx, caller: CallerDep, job_id: str) -> Caller:
 )
 async def get_job_events(
     context: Ctx,
-    job_id: str,
+    job_id: Identifier,
     caller: Annotated[Caller, Depends(_exists)],
     last_event_id: Annotated[int, Header(ge=0, le=2**62, description="Go on behind this event.")] = 0,
 ) -> AsyncIterator[ServerSentEvent]:

@@ -19,7 +19,7 @@ from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.prefer import Prefer, applied, preferences, seconds_to_wait
 from service.web.problems import documented
-from service.web.schemas.common import Label, Moment, PageOf
+from service.web.schemas.common import Identifier, Label, Moment, PageOf
 from service.web.schemas.jobs import JobBody, JobSummary, JobView, StateWord, VerdictWord, job_document, job_summary
 from service.web.strict_json import json_body
 from service.workflows.callers import Caller
@@ -94,7 +94,7 @@ def _submit(context: Context, caller: Caller, body: JobBody, key: str | None) ->
     operation_id="get_job",
     summary="Read a job",
 )
-def get_job(request: Request, context: Ctx, caller: CallerDep, job_id: str) -> Response:
+def get_job(request: Request, context: Ctx, caller: CallerDep, job_id: Identifier) -> Response:
     """State and progress; once it has ended, `result` or `error`."""
     detail, notification = read_job(context.database, caller, job_id)
     document = job_document(detail, notification)
@@ -144,7 +144,7 @@ def get_jobs(
     operation_id="cancel_job",
     summary="Cancel a job",
 )
-def delete_job(context: Ctx, caller: CallerDep, job_id: str) -> Response:
+def delete_job(context: Ctx, caller: CallerDep, job_id: Identifier) -> Response:
     """Cancel: at once if it waits, within 2 s if it runs. Its dataset, plan and events are kept."""
     caller.must_submit()
     read_job(context.database, caller, job_id)  # who may not see it does not find it

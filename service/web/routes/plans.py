@@ -13,7 +13,7 @@ from service.web.openapi import takes
 from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.problems import documented
-from service.web.schemas.common import Label, PageOf
+from service.web.schemas.common import Identifier, Label, PageOf
 from service.web.schemas.plans import NamedPlanBody, NamedPlanView, named_plan_document
 from service.web.strict_json import json_body
 from service.workflows.plans import list_plans, post_plan, read_named_plan
@@ -49,7 +49,7 @@ def store_plan(
     operation_id="get_plan",
     summary="Read a named plan",
 )
-def get_plan(request: Request, context: Ctx, _caller: CallerDep, plan_id: str) -> Response:
+def get_plan(request: Request, context: Ctx, _caller: CallerDep, plan_id: Identifier) -> Response:
     """One version, with every default written out."""
     found = read_named_plan(context.database, plan_id)
     return conditional(request, found.id, document_response(named_plan_document(found)))

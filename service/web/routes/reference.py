@@ -1,12 +1,16 @@
 """The interactive reference: Swagger UI, whose files come with the package, so that it works with no internet."""
 
+import hashlib
+import json
 from importlib.resources import files
 from pathlib import Path
 
-from fastapi import APIRouter
-from starlette.responses import HTMLResponse
+from fastapi import APIRouter, Request
+from starlette.responses import HTMLResponse, Response
 from starlette.staticfiles import StaticFiles
 
+from service.web.answers import document_response
+from service.web.conditional import conditional
 from service.web.headers import POLICY
 
 router = APIRouter(include_in_schema=False)
@@ -28,6 +32,13 @@ PAGE = """<!doctype html>
 </body>
 </html>
 """
+
+
+@router.get("/openapi.json")
+def get_document(request: Request) -> Response:
+    """The OpenAPI document. Making it takes a second, in a thread: the event loop goes on meanwhile."""
+    document = json.dumps(request.app.openapi(), ensure_ascii=False).encode()
+    return conditional(request, hashlib.sha256(document).hexdigest(), document_response(document))
 
 
 @router.get("/docs")

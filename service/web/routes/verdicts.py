@@ -15,7 +15,7 @@ from service.web.context import Ctx
 from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.problems import documented
-from service.web.schemas.common import Label, Moment, PageOf
+from service.web.schemas.common import Identifier, Label, Moment, PageOf
 from service.web.schemas.jobs import Verdict, VerdictWord
 from service.workflows.read import list_verdicts, read_verdict
 
@@ -29,7 +29,7 @@ router = APIRouter(tags=["verdicts"])
     operation_id="get_verdict",
     summary="Read a job's verdict",
 )
-def get_verdict(request: Request, context: Ctx, caller: CallerDep, job_id: str) -> Response:
+def get_verdict(request: Request, context: Ctx, caller: CallerDep, job_id: Identifier) -> Response:
     """The canonical document (RFC 8785) whose SHA-256 is the ETag. 404 `verdict_not_ready` until the job has ended."""
     verdict = read_verdict(context.database, caller, job_id)
     return conditional(request, verdict.digest, document_response(verdict.document.encode()))

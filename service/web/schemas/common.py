@@ -1,22 +1,35 @@
 """Pieces that several bodies share."""
 
+import re
 from datetime import datetime
 from typing import Annotated, Any, Generic, TypeVar
 
-from pydantic import AfterValidator, AwareDatetime, BaseModel, BeforeValidator, ConfigDict, Field
+from fastapi import Path
+from pydantic import AfterValidator, AwareDatetime, BaseModel, BeforeValidator, ConfigDict, Field, WithJsonSchema
 
 T = TypeVar("T")
 
 NO_CONTROLS = r"^[^\x00-\x1f\x7f]*$"  # PostgreSQL text holds no NUL; logs and pages want no other controls either
 
+
+def _whole(value: Any) -> Any:
+    """3.0 is a whole number to JSON Schema, and to languages that know one kind of number."""
+    return int(value) if isinstance(value, float) and value.is_integer() else value
+
+
+Whole = Annotated[int, BeforeValidator(_whole)]
+Identifier = Annotated[str, Path(pattern=r"^[0-9A-Za-z-]{1,64}$", description="As answered when it was made.")]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
 Label = Annotated[str, Field(min_length=1, max_length=200, pattern=NO_CONTROLS)]
 Line = Annotated[str, Field(max_length=500, pattern=NO_CONTROLS)]
 
 
+RFC3339 = re.compile(r"\d{4}-\d\d-\d\d[Tt ]\d\d:\d\d:\d\d(\.\d+)?([Zz]|[+-]\d\d:\d\d)")
+
+
 def _is_text(value: Any) -> Any:
-    if not isinstance(value, str):
-        raise ValueError("must be an RFC 3339 date and time as text")
+    if not isinstance(value, str) or not RFC3339.fullmatch(value):  # pydantic takes seconds since 1970, too
+        raise ValueError("must be an RFC 3339 date and time with time zone, as text")
     return value
 
 
@@ -27,7 +40,11 @@ def _usable(value: datetime) -> datetime:
 
 
 Moment = Annotated[
-    AwareDatetime, Field(strict=False), BeforeValidator(_is_text, json_schema_input_type=str), AfterValidator(_usable)
+    AwareDatetime,
+    Field(strict=False),
+    BeforeValidator(_is_text),
+    AfterValidator(_usable),
+    WithJsonSchema({"type": "string", "format": "date-time"}, mode="validation"),
 ]
 
 

@@ -20,7 +20,7 @@ from service.core.plan import (
 from service.errors import FieldError, InvalidInput
 from service.store.clock import rfc3339
 from service.store.named_plans import NamedPlan
-from service.web.schemas.common import Answer, Body, Finite, Label
+from service.web.schemas.common import Answer, Body, Finite, Label, Whole
 
 T = TypeVar("T")
 
@@ -29,9 +29,9 @@ class ResamplingBody(Body):
     """How the data are split for cross-validation. Every scheme is exact."""
 
     scheme: Scheme = Field("k_fold", description="Leave out folds of points, single points, levels or series.")
-    folds: int = Field(10, ge=2, le=1000, description="For k_fold; with as many as points: leave-one-out.")
-    repeats: int = Field(10, ge=1, le=1000, description="For k_fold: how often the points are dealt anew.")
-    seed: int = Field(0, ge=0, lt=2**32, description="For k_fold: random_state of scikit-learn's RepeatedKFold.")
+    folds: Whole = Field(10, ge=2, le=1000, description="For k_fold; with as many as points: leave-one-out.")
+    repeats: Whole = Field(10, ge=1, le=1000, description="For k_fold: how often the points are dealt anew.")
+    seed: Whole = Field(0, ge=0, lt=2**32, description="For k_fold: random_state of scikit-learn's RepeatedKFold.")
 
 
 class MaxPermissibleErrorBody(Body):
@@ -55,7 +55,7 @@ class RequirementsBody(Body):
 
     max_permissible_error: MaxPermissibleErrorBody | None = None
     monotonic: bool = Field(True, description="One reading must mean one value, all over the working range.")
-    min_levels: int | None = Field(None, ge=2, le=1_000_000)
+    min_levels: Whole | None = Field(None, ge=2, le=1_000_000)
     min_r2: Finite | None = Field(None, ge=0, le=1)
     back_calculated: BackCalculatedBody | None = None
     max_unseen_bend: Finite | None = Field(None, gt=0, description="In `y_unit`.")
@@ -64,8 +64,8 @@ class RequirementsBody(Body):
 class PlanBody(Body):
     """What to try and what must hold. Every key is optional."""
 
-    min_degree: int = Field(1, ge=0, le=12)
-    max_degree: int = Field(6, ge=0, le=12)
+    min_degree: Whole = Field(1, ge=0, le=12)
+    max_degree: Whole = Field(6, ge=0, le=12)
     intercept: bool = Field(True, description="False: the curve goes through the origin.")
     weights: Weights = "auto"
     rule: Rule = "least_bend"
