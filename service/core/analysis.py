@@ -62,7 +62,8 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     monotonic = degree > 0 and is_monotonic(coefficients, full.domain, working_range)
     slope = slope_range(coefficients, full.domain, working_range)
     say("check", 0, 1)
-    ratios = gap_ratios(full)
+    # the walk has them as far as the plan tries; one degree more is wanted at its limit
+    ratios = choice.walked.ratios if degree < tried.top else gap_ratios(full)
     t = studentised(full, degree, known_uncertainty=known)
     cooks = cooks_distance(full, degree)
     diagnostics = diagnose(

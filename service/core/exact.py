@@ -50,8 +50,8 @@ def exact_fit(x: Floats, y: Floats, weights: Floats, degree: int, *, intercept: 
     equal = bool((weights == weights[0]).all())
     w0 = float(weights[0]) if equal else 1.0
     ws, w_shift = ([1] * len(us), 0) if equal else _integers(weights.tolist())
-    bits = 2 * degree * max(v.bit_length() for v in us) + max(v.bit_length() for v in ws) + 64
-    if bits > MOST_BITS or max(v.bit_length() for v in ys) > MOST_BITS:
+    bits = 2 * degree * max(map(int.bit_length, us)) + max(map(int.bit_length, ws)) + 64
+    if bits > MOST_BITS or max(map(int.bit_length, ys)) > MOST_BITS:
         return None
     first = 0 if intercept else 1
     matrix, total = _normal_equations(us, ys, ws, first, degree)

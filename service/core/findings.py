@@ -21,6 +21,7 @@ class Findings:
 
     full: fits as high as the data allow (three terms above the plan's limit at most); tried: the same
     up to the plan's limit. studentised, cooks: at the chosen degree, NaN where undefined.
+    gap_ratios: by degree, one above the chosen at least where the data allow.
     coefficients: of the chosen curve on T_j; slope: least, greatest and x of the flattest place.
     """
 

@@ -12,6 +12,7 @@ from service.core.tails import t_two_sided, z_two_sided
 MOST_POINTS = 2
 BONFERRONI = 0.01
 MOST_LEVERAGE = 0.8
+LEAST = 2.9  # a smaller residual has no Bonferroni p below 0.01, even among three points and with a known deviation
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -61,7 +62,8 @@ def _studentised(fits: NestedFits, degrees: slice, known_uncertainty: bool) -> F
     spare[spare < 1e-10] = np.nan
     if known_uncertainty:
         return np.asarray(e / np.sqrt(spare))
-    rss, df = fits.rss[degrees], fits.all_df()[degrees] - 1
+    rss = fits.rss[degrees]
+    df = fits.df(degrees.start) - 1.0 - np.arange(rss.size)
     # a point that alone spoils an otherwise exact fit: keep its residual large but finite
     left = np.maximum(rss - e * e / spare, fits.rounding_rss + 1e-14 * rss)
     t = e / np.sqrt(spare * left / np.where((df < 1) | (rss <= fits.rounding_rss), np.nan, df))
@@ -119,11 +121,11 @@ def _wildest(fits: NestedFits, chosen: int, known_uncertainty: bool) -> tuple[in
     first = chosen if fits.intercept else max(chosen, 1)
     degrees = slice(first, chosen + 2)
     t = _studentised(fits, degrees, known_uncertainty)
-    t[fits.leverage[:, degrees] >= MOST_LEVERAGE] = np.nan
+    size = np.abs(t)
+    size[~(size >= LEAST) | (fits.leverage[:, degrees] >= MOST_LEVERAGE)] = 0.0  # NaN among them
     best: tuple[int, int, float, float] | None = None
-    for column in range(t.shape[1]):
-        place = farthest(t[:, column])
-        if place is None:
+    for column, place in enumerate(size.argmax(axis=0).tolist()):
+        if size[place, column] == 0:
             continue
         value, degree = float(t[place, column]), first + column
         p = outlier_p(value, fits, degree, known_uncertainty=known_uncertainty)

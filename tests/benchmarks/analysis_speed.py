@@ -1,5 +1,7 @@
 """The whole analysis against common tools on the same data in the same run: ratios of medians, calls interleaved.
 
+Times are of the processor, so that other work on the machine matters less.
+
 python -m tests.benchmarks.analysis_speed --points 30 --rounds 30
 """
 
@@ -77,16 +79,16 @@ def exact_cross_validation(x: Floats, y: Floats) -> None:
 
 
 def medians(calls: dict[str, Callable[[], object]], rounds: int, repeats: int = 5) -> dict[str, float]:
-    """Median seconds of each call, each called `repeats` times in a row in each round."""
+    """Median processor seconds of each call, each called `repeats` times in a row in each round."""
     for call in calls.values():
         call()
     taken: dict[str, list[float]] = {name: [] for name in calls}
     for _ in range(rounds):
         for name, call in calls.items():
             for _ in range(repeats):
-                start = time.perf_counter()
+                start = time.process_time()
                 call()
-                taken[name].append(time.perf_counter() - start)
+                taken[name].append(time.process_time() - start)
     return {name: float(np.median(values)) for name, values in taken.items()}
 
 

@@ -144,10 +144,10 @@ def wide_gap(found: Findings) -> Warning | None:
                 method="range of the points against the working range (common practice, no source)",
             )
     here = float(found.gap_ratios[found.degree])
-    above = float(found.gap_ratios[min(found.degree + 1, found.full.top)])
+    above = float(found.gap_ratios[min(found.degree + 1, found.gap_ratios.size - 1)])
     if max(here, above) <= GAP_CAUTION:
         return None
-    degree = found.degree if here > GAP_CAUTION else min(found.degree + 1, found.full.top)
+    degree = found.degree if here > GAP_CAUTION else found.degree + 1
     low, high = _widest_freedom(found, degree)
     message = (
         f"Between x = {low:g} and {high:g} no point holds the curve"
