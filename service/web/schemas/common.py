@@ -17,7 +17,8 @@ def _whole(value: Any) -> Any:
     return int(value) if isinstance(value, float) and value.is_integer() else value
 
 
-Whole = Annotated[int, BeforeValidator(_whole)]
+WHOLE = BeforeValidator(_whole)
+Whole = Annotated[int, WHOLE]
 Identifier = Annotated[str, Path(pattern=r"^[0-9A-Za-z-]{1,64}$", description="As answered when it was made.")]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
 Label = Annotated[str, Field(min_length=1, max_length=200, pattern=NO_CONTROLS)]

@@ -10,14 +10,14 @@ from service.core.plan import Plan
 from service.core.result import Reason
 from service.store.clock import rfc3339
 from service.store.records import JobDetail, JobRecord, NotificationRecord
-from service.web.schemas.common import Answer, Body, FieldProblem, Label, Whole
+from service.web.schemas.common import WHOLE, Answer, Body, FieldProblem, Label
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.plans import PlanBody
 from service.web.schemas.results import JobResult
 
 StateWord = Literal["queued", "running", "succeeded", "failed", "cancelled"]
 VerdictWord = Literal["adequate", "conditional", "inadequate", "undecided"]
-Priority = Annotated[Whole, Field(ge=-100, le=100)]
+Priority = Annotated[int, Field(ge=-100, le=100), WHOLE]
 
 
 class JobBody(Body):

@@ -20,7 +20,7 @@ from service.core.plan import (
 from service.errors import FieldError, InvalidInput
 from service.store.clock import rfc3339
 from service.store.named_plans import NamedPlan
-from service.web.schemas.common import Answer, Body, Finite, Label, Whole
+from service.web.schemas.common import WHOLE, Answer, Body, Finite, Label, Whole
 
 T = TypeVar("T")
 
@@ -55,7 +55,7 @@ class RequirementsBody(Body):
 
     max_permissible_error: MaxPermissibleErrorBody | None = None
     monotonic: bool = Field(True, description="One reading must mean one value, all over the working range.")
-    min_levels: Whole | None = Field(None, ge=2, le=1_000_000)
+    min_levels: Annotated[int, Field(ge=2, le=1_000_000), WHOLE] | None = None
     min_r2: Finite | None = Field(None, ge=0, le=1)
     back_calculated: BackCalculatedBody | None = None
     max_unseen_bend: Finite | None = Field(None, gt=0, description="In `y_unit`.")
