@@ -83,9 +83,9 @@ class Database:
 
 
 def open_database(settings: Settings, *, durable: bool) -> Database:
-    """Connections are made when first used. `durable`: a commit survives a power failure (SQLite synchronous=FULL, PostgreSQL
-    synchronous_commit=on).
+    """Connections are made when first used.
 
+    `durable`: a commit survives a power failure (SQLite synchronous=FULL, PostgreSQL synchronous_commit=on).
     Workers pass False: a claim or finish lost to a power failure only runs the job again.
     """
     if settings.database_url is not None:

@@ -28,6 +28,8 @@ HEAD = (
 FIND_DIGEST = select(datasets.c.id, func.length(datasets.c.x).label("size")).where(
     datasets.c.digest == bindparam("of_digest")
 )
+ADD = insert(datasets).on_conflict_do_nothing(index_elements=["digest"]).returning(datasets.c.id)
+POSTED = insert(dataset_posts).on_conflict_do_nothing()
 LOAD = select(datasets).where(datasets.c.id == bindparam("of_id"))
 
 
@@ -80,11 +82,12 @@ def store(
         "summary": json.dumps(summary),
         "details": json.dumps(content.details),
         "series": series,
+        "u_x": None,
+        "u_y": None,
         **numbers,
     }
     # The same statement text serves SQLite, and one of two callers at the same moment finds the other's row.
-    statement = insert(datasets).on_conflict_do_nothing(index_elements=["digest"]).returning(datasets.c.id)
-    new = connection.execute(statement, row).scalar()
+    new = connection.execute(ADD, row).scalar()
     if new is not None:
         return cast(str, new), True
     return connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar_one(), False
@@ -93,7 +96,7 @@ def store(
 def posted(connection: Connection, dataset_id: str, submitted_by: str) -> None:
     """Remember that this submitter has posted it."""
     row = {"dataset_id": dataset_id, "submitted_by": submitted_by}
-    connection.execute(insert(dataset_posts).on_conflict_do_nothing(), row)
+    connection.execute(POSTED, row)
 
 
 def find(connection: Connection, dataset_id: str, *, posted_by: str | None = None) -> DatasetRecord | None:

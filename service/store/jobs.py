@@ -4,7 +4,7 @@ from dataclasses import dataclass, fields
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, RowMapping, Select, func, insert, literal, select
+from sqlalchemy import Connection, Integer, RowMapping, Select, Text, bindparam, func, insert, literal, select
 
 from service.store.records import JobDetail, JobFilter, JobRecord, Page
 from service.store.tables import WAITING, State, jobs, plans, results
@@ -12,11 +12,16 @@ from service.store.turns import next_turn
 
 RECORD = tuple(jobs.c[one.name] for one in fields(JobRecord))
 
+# Built once: building these takes longer than running them.
+ADD = insert(jobs).values(turn=next_turn(bindparam("by", type_=Text()), bindparam("at", type_=Integer())))
+COUNT_WAITING = select(func.count()).select_from(
+    select(literal(1)).where(WAITING).limit(bindparam("at_most", type_=Integer())).subquery()
+)
+
 
 def waiting(connection: Connection, *, at_most: int) -> int:
     """Number of jobs that wait, counted no further than `at_most`."""
-    some = select(literal(1)).where(WAITING).limit(at_most).subquery()
-    return connection.execute(select(func.count()).select_from(some)).scalar_one()
+    return connection.execute(COUNT_WAITING, {"at_most": at_most}).scalar_one()
 
 
 def add(
@@ -39,12 +44,13 @@ def add(
         "subject": subject,
         "submitted_by": submitted_by,
         "priority": priority,
-        "turn": next_turn(submitted_by, priority),
         "queued_at": now,
         "run_after": now,
         "attempts": 0,
+        "by": submitted_by,
+        "at": priority,
     }
-    connection.execute(insert(jobs).values(row))
+    connection.execute(ADD, row)
 
 
 def find(connection: Connection, job_id: str) -> JobRecord | None:
@@ -69,11 +75,15 @@ def detail(connection: Connection, job_id: str) -> JobDetail | None:
 
 def newest(connection: Connection, wanted: JobFilter, *, before: str | None, limit: int) -> Page[JobRecord]:
     """Jobs that match, newest first."""
-    query = _matching(select(*RECORD), wanted).order_by(jobs.c.id.desc()).limit(limit + 1)
-    if before is not None:
-        query = query.where(jobs.c.id < before)
+    query = newest_query(wanted, before=before, limit=limit)
     rows = [_record(row) for row in connection.execute(query).mappings()]
     return Page(items=tuple(rows[:limit]), after=rows[limit - 1].id if len(rows) > limit else None)
+
+
+def newest_query(wanted: JobFilter, *, before: str | None, limit: int) -> Select[Any]:
+    """What `newest` asks: one row more than a page, to know whether there are more."""
+    query = _matching(select(*RECORD), wanted).order_by(jobs.c.id.desc()).limit(limit + 1)
+    return query if before is None else query.where(jobs.c.id < before)
 
 
 @dataclass(frozen=True, slots=True)

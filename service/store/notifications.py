@@ -44,7 +44,7 @@ def due(connection: Connection, now: datetime, *, limit: int) -> list[str]:
         .join(jobs, jobs.c.id == notifications.c.job_id)
         .where(notifications.c.state == "waiting", jobs.c.state.in_(FINAL))
         .where((notifications.c.next_at.is_(None)) | (notifications.c.next_at <= now))
-        .order_by(notifications.c.job_id)
+        .order_by(notifications.c.next_at.is_not(None), notifications.c.next_at)  # what was never tried comes first
         .limit(limit)
     )
     return list(connection.execute(query).scalars())

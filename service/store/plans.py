@@ -7,12 +7,13 @@ from sqlalchemy.dialects.postgresql import insert
 
 from service.store.tables import plans
 
+FIND = select(plans.c.digest).where(plans.c.digest == bindparam("of_digest"))
 LOAD = select(plans.c.document).where(plans.c.digest == bindparam("of_digest"))
 
 
 def store(connection: Connection, document: bytes, digest: str, now: datetime) -> None:
     """Keep the document under its digest, once."""
-    if connection.execute(select(plans.c.digest).where(plans.c.digest == digest)).scalar() is None:
+    if connection.execute(FIND, {"of_digest": digest}).first() is None:
         statement = insert(plans).on_conflict_do_nothing(index_elements=["digest"])
         connection.execute(statement, {"digest": digest, "document": document.decode(), "created_at": now})
 

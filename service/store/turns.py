@@ -18,7 +18,7 @@ from service.store.tables import WAITING, jobs
 STALEST_EVERY = 8  # one claim in so many goes by turn alone, so that no stream of urgent jobs starves the others
 
 
-def next_turn(submitted_by: str, priority: int) -> ColumnElement[int]:
+def next_turn(submitted_by: ColumnElement[str] | str, priority: ColumnElement[int] | int) -> ColumnElement[int]:
     """The turn of a new job, as an expression for its INSERT."""
     mine = select(func.max(jobs.c.turn) + 1).where(
         WAITING, jobs.c.submitted_by == submitted_by, jobs.c.priority == priority
