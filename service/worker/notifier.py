@@ -1,5 +1,6 @@
 """Sends notifications from the sweeping process, and keeps them from reaching into private networks."""
 
+import asyncio
 import logging
 import socket
 import ssl
@@ -20,6 +21,7 @@ from service.workflows.notify import Refused, is_private, send_due
 THREADS = 4  # so that one address that does not answer holds up no other
 LOOK_SECONDS = 1.0
 TIMEOUT = httpx.Timeout(10.0, connect=5.0)
+WHOLE_SECONDS = 15.0  # of one exchange
 
 logger = logging.getLogger(__name__)
 Resolve = Callable[[str, int], list[str]]
@@ -37,25 +39,39 @@ class Poster:
     Redirects are not followed, proxies of the environment not used, and of the answer only the status is read.
     """
 
-    def __init__(self, *, allow_private: bool, resolve: Resolve = resolve) -> None:
+    def __init__(self, *, allow_private: bool, resolve: Resolve = resolve, seconds: float = WHOLE_SECONDS) -> None:
         self._allow_private = allow_private
         self._resolve = resolve
-        self._http = httpx.Client(timeout=TIMEOUT, trust_env=False, follow_redirects=False)
+        self._seconds = seconds
+        self._trust = httpx.create_ssl_context(trust_env=False)
 
     def __call__(self, url: str, body: bytes, headers: dict[str, str]) -> int:
         """The status of the answer. Raises Refused; OSError where there was no answer."""
-        target = httpx.URL(url)
-        addresses = self._resolve(target.host, target.port or (443 if target.scheme == "https" else 80))
+        try:
+            target = httpx.URL(url)
+            addresses = self._resolve(target.host, target.port or (443 if target.scheme == "https" else 80))
+        except (httpx.InvalidURL, ValueError) as error:  # of which UnicodeError: a name that cannot be asked for
+            raise Refused(f"the address cannot be used: {error}"[:300]) from error
         if not self._allow_private and (not addresses or any(is_private(one) for one in addresses)):
             raise Refused(f"{target.host} has a private or loopback address, which is not called")
         pinned = target.copy_with(host=str(ip_address(addresses[0])))
         sent = {**headers, "Host": target.netloc.decode("ascii"), "User-Agent": "leastbend"}
         extensions = {"sni_hostname": target.host} if target.scheme == "https" else {}
         try:
-            with self._http.stream("POST", pinned, content=body, headers=sent, extensions=extensions) as answer:
-                return answer.status_code
+            return asyncio.run(self._post(pinned, body, sent, extensions))
+        except TimeoutError as error:
+            raise OSError(f"nothing within {self._seconds:g} s") from error
         except (httpx.HTTPError, ssl.SSLError) as error:
             raise OSError(f"{type(error).__name__}: {error}") from error
+
+    async def _post(self, url: httpx.URL, body: bytes, headers: dict[str, str], extensions: dict[str, str]) -> int:
+        # A timeout of each step alone would let an address that answers a byte at a time hold a sender for hours.
+        async with (
+            asyncio.timeout(self._seconds),
+            httpx.AsyncClient(timeout=TIMEOUT, trust_env=False, follow_redirects=False, verify=self._trust) as http,
+            http.stream("POST", url, content=body, headers=headers, extensions=extensions) as answer,
+        ):
+            return answer.status_code
 
 
 class Notifier(threading.Thread):
@@ -73,7 +89,7 @@ class Notifier(threading.Thread):
         poster = Poster(allow_private=self._settings.notify_private)
         while not self._pause.wait(LOOK_SECONDS):
             try:
-                while send_due(database, self._settings, poster, now=self._now()):
+                while send_due(database, self._settings, poster, clock=self._now):
                     pass
             except (LeastbendError, SQLAlchemyError) as error:
                 logger.warning("notifications wait: %s", error)

@@ -6,11 +6,14 @@ webhook-signature. Any 2xx answer is a receipt; otherwise it is sent again, with
 """
 
 import json
+import re
+import socket
+from collections.abc import Callable
 from datetime import datetime, timedelta
-from ipaddress import ip_address
+from ipaddress import IPv4Address, IPv6Address, IPv6Network, ip_address
 from typing import Protocol
-from urllib.parse import urlsplit
 
+import httpx
 from standardwebhooks.webhooks import Webhook
 
 from service.errors import InvalidInput
@@ -26,6 +29,9 @@ PAUSES = tuple(timedelta(seconds=s) for s in (5, 30, 120, 600, 1800, 3600, 7200,
 TAKEN_FOR = timedelta(seconds=60)
 AT_ONCE = 20
 LOCAL_NAMES = ("localhost", "ip6-localhost")
+# Labels of 1 to 63 characters (RFC 1035), or an IPv6 address: what a resolver can be asked for.
+NAME = re.compile(r"(?=.{1,253}$)[\w-]{1,63}(\.[\w-]{1,63})*\.?|[0-9A-Fa-f:.]+")
+NAT64 = IPv6Network("64:ff9b::/96")
 
 
 class Refused(Exception):
@@ -45,37 +51,51 @@ def check_url(settings: Settings, caller: Caller, url: str) -> None:
     if caller.open and settings.notify_secret is None:
         message = "without keys, notifications are signed with the setting LEASTBEND_NOTIFY_SECRET, which is not set"
         raise InvalidInput.at("/notify_url", message)
-    parts = urlsplit(url)
     try:
-        port_is_known = parts.port is None or 0 < parts.port < 65536
-    except ValueError:
-        port_is_known = False
-    if parts.scheme not in ("http", "https") or not parts.hostname or not port_is_known:
+        parts = httpx.URL(url)  # as the sender reads it
+        host, port = parts.host, parts.port
+    except (httpx.InvalidURL, ValueError):
+        parts, host, port = httpx.URL(""), "", None
+    if parts.scheme not in ("http", "https") or not NAME.fullmatch(host) or (port is not None and not 0 < port < 65536):
         raise InvalidInput.at("/notify_url", "must be an http or https address with a host")
-    if parts.username is not None or parts.fragment:
+    if parts.userinfo or parts.fragment:
         raise InvalidInput.at("/notify_url", "must hold neither a user name nor a fragment")
-    if not settings.notify_private and is_private(parts.hostname):
+    if not settings.notify_private and is_private(host):
         raise InvalidInput.at("/notify_url", "is a private or loopback address, which this installation does not call")
 
 
 def is_private(host: str) -> bool:
     """Whether an address, or a name that always means this machine, lies outside the public internet."""
-    if host.lower().rstrip(".") in LOCAL_NAMES or host.lower().rstrip(".").endswith(".localhost"):
+    name = host.lower().rstrip(".")
+    if name in LOCAL_NAMES or name.endswith(".localhost"):
         return True
     try:
         address = ip_address(host)
     except ValueError:
-        return False
-    mapped = getattr(address, "ipv4_mapped", None)
-    return not (mapped or address).is_global or address.is_multicast
+        try:
+            address = IPv4Address(socket.inet_aton(name))  # 127.1, 0x7f000001, 2130706433: systems take these, too
+        except OSError:
+            return False
+    return any(not one.is_global or one.is_multicast for one in (address, *_within(address)))
 
 
-def send_due(database: Database, settings: Settings, sender: Sender, *, now: datetime) -> int:
+def _within(address: IPv4Address | IPv6Address) -> list[IPv4Address]:
+    """IPv4 addresses that an IPv6 address leads to: mapped, 6to4 (RFC 3056), Teredo (RFC 4380), NAT64 (RFC 6052)."""
+    if isinstance(address, IPv4Address):
+        return []
+    found = [address.ipv4_mapped, address.sixtofour, *(address.teredo or ())]
+    if address in NAT64:
+        found.append(IPv4Address(address.packed[-4:]))
+    return [one for one in found if one is not None]
+
+
+def send_due(database: Database, settings: Settings, sender: Sender, *, clock: Callable[[], datetime]) -> int:
     """Send what is due; answers how many were tried. Many senders at once are safe."""
     with database.read() as connection:
-        waiting = notifications.due(connection, now, limit=AT_ONCE)
+        waiting = notifications.due(connection, clock(), limit=AT_ONCE)
     tried = 0
     for job_id in waiting:
+        now = clock()
         with database.write() as connection:
             due = notifications.take(connection, job_id, now=now, again_at=now + TAKEN_FOR)
         if due is None:

@@ -32,9 +32,15 @@ class Real:
 
 def make_key(data_dir: Path, name: str, role: str) -> str:
     """A new key, made by the command."""
+    return make_key_and_secret(data_dir, name, role)[0]
+
+
+def make_key_and_secret(data_dir: Path, name: str, role: str) -> tuple[str, str]:
+    """A new key and the secret that its notifications are signed with."""
     command = [*COMMAND, "keys", "create", "--name", name, "--role", role, "--data-dir", str(data_dir)]
     done = subprocess.run(command, capture_output=True, text=True, timeout=60, check=True)
-    return done.stdout.splitlines()[0].removeprefix("key: ")
+    key, secret = done.stdout.splitlines()[:2]
+    return key.removeprefix("key: "), secret.removeprefix("notification secret: ")
 
 
 @contextmanager
