@@ -6,6 +6,7 @@ from typing import Any
 
 from sqlalchemy import Connection, Integer, RowMapping, Select, Text, bindparam, func, insert, literal, select
 
+from service.store.clock import EPOCH
 from service.store.records import JobDetail, JobFilter, JobRecord, Page
 from service.store.tables import WAITING, State, jobs, plans, results
 from service.store.turns import next_turn
@@ -45,7 +46,7 @@ def add(
         "submitted_by": submitted_by,
         "priority": priority,
         "queued_at": now,
-        "run_after": now,
+        "run_after": EPOCH,  # at once, whatever the clock of the host that runs it says
         "attempts": 0,
         "by": submitted_by,
         "at": priority,

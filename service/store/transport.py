@@ -13,10 +13,12 @@ from huey import Huey, PostgresHuey, SqliteHuey
 from psycopg.conninfo import make_conninfo
 from sqlalchemy import make_url
 
+from service.errors import Unusable
 from service.settings import Settings
 from service.store.database import BUSY_SECONDS, postgres_options, prepare_directory
 
 FILE_NAME = "queue.db"
+HUEY: dict[str, Any] = {"results": False, "utc": True}
 ADVISORY_LOCK = 0x1EA57BE4E  # any fixed number but that of the migrations
 FAILURES = (sqlite3.Error, psycopg.Error, OSError)
 
@@ -64,13 +66,28 @@ class Transport:
 
 
 def open_transport(settings: Settings) -> Transport:
-    """The queue of this installation: a file beside the data, or tables of the same PostgreSQL."""
-    common: dict[str, Any] = {"results": False, "utc": True}
-    if settings.database_url is None:
-        path = prepare_directory(settings.data_dir) / FILE_NAME
-        return Transport(SqliteHuey("leastbend", filename=str(path), fsync=False, timeout=BUSY_SECONDS, **common))
-    url = make_url(settings.database_url).set(drivername="postgresql").render_as_string(hide_password=False)
-    dsn = make_conninfo(url, **postgres_options(settings.database_url, durable=False))
+    """The queue of this installation: a file beside the data, or tables of the same PostgreSQL. Raises Unusable."""
+    try:
+        return _sqlite(settings) if settings.database_url is None else _postgres(settings.database_url)
+    except FAILURES as error:
+        raise Unusable(f"the queue cannot be opened: {error}") from error
+
+
+def _sqlite(settings: Settings) -> Transport:
+    path = prepare_directory(settings.data_dir) / FILE_NAME
+    try:
+        return Transport(SqliteHuey("leastbend", filename=str(path), fsync=False, timeout=BUSY_SECONDS, **HUEY))
+    except sqlite3.OperationalError:
+        raise
+    except sqlite3.DatabaseError:  # damaged; it holds nothing but hints
+        for part in path.parent.glob(f"{FILE_NAME}*"):
+            part.unlink()
+        return Transport(SqliteHuey("leastbend", filename=str(path), fsync=False, timeout=BUSY_SECONDS, **HUEY))
+
+
+def _postgres(address: str) -> Transport:
+    url = make_url(address).set(drivername="postgresql").render_as_string(hide_password=False)
+    dsn = make_conninfo(url, **postgres_options(address, durable=False))
     with psycopg.connect(dsn) as connection:  # of two processes that start at once, one makes the tables
         connection.execute("SELECT pg_advisory_xact_lock(%s)", (ADVISORY_LOCK,))
-        return Transport(PostgresHuey("leastbend", dsn=dsn, table_prefix="leastbend_queue", **common))
+        return Transport(PostgresHuey("leastbend", dsn=dsn, table_prefix="leastbend_queue", **HUEY))

@@ -1,5 +1,6 @@
 """huey's consumer with our own worker, scheduler and signals: it starts, watches, restarts and stops the processes."""
 
+import contextlib
 import logging
 import os
 import signal
@@ -10,8 +11,8 @@ from sqlalchemy.exc import SQLAlchemyError
 
 from service.errors import LeastbendError
 from service.settings import Settings
-from service.store.clock import utc_now
 from service.store.database import Database, open_database
+from service.store.shared_clock import SharedClock
 from service.store.transport import QueueAway, Transport
 from service.worker.desk import Desk
 from service.worker.heartbeat import Heartbeat
@@ -38,13 +39,15 @@ class JobWorker(Worker):  # type: ignore[misc]  # huey has no types
         self._transport = transport
         self._away = False
         self._desk: Desk | None = None
+        self._clock: SharedClock | None = None
 
     def initialize(self) -> None:
         """In the new process: its own connections, its own heartbeat."""
         database = open_database(self._settings, durable=False)
-        heartbeat = Heartbeat(self._settings, database)
+        self._clock = clock = SharedClock(database)
+        heartbeat = Heartbeat(self._settings, database, clock=clock)
         heartbeat.start()
-        self._desk = Desk(self._settings, database, heartbeat, this_machine(), worker=worker_name())
+        self._desk = Desk(self._settings, database, heartbeat, this_machine(), worker=worker_name(), clock=clock)
 
     @property
     def busy(self) -> bool:
@@ -64,9 +67,15 @@ class JobWorker(Worker):  # type: ignore[misc]  # huey has no types
             return
         self._away = False
         if received and self._desk is not None:
+            self._set_clock()
             self._desk.work_once()
         elif not self._transport.waits:
             self.stop_flag.wait(POLL_SECONDS)
+
+    def _set_clock(self) -> None:
+        if self._clock is not None:
+            with contextlib.suppress(LeastbendError, SQLAlchemyError):  # the claim will meet the same, and say so
+                self._clock.keep_right()
 
 
 class Sweeper(Scheduler):  # type: ignore[misc]
@@ -77,19 +86,22 @@ class Sweeper(Scheduler):  # type: ignore[misc]
         self._settings = settings
         self._transport = transport
         self._database: Database | None = None
+        self._clock: SharedClock | None = None
         self.busy = False
 
     def initialize(self) -> None:
         """In the new process: its own connections."""
         self._database = open_database(self._settings, durable=False)
+        self._clock = SharedClock(self._database)
         start_notifiers(self._settings)
 
     def loop(self, now: Any = None) -> None:
         """One sweep."""
-        if self._database is not None:
+        if self._database is not None and self._clock is not None:
             try:
+                self._clock.keep_right()
                 swept = sweep(
-                    self._database, self._transport, self._settings, now=now or utc_now(), is_gone=is_gone, end=end
+                    self._database, self._transport, self._settings, now=now or self._clock(), is_gone=is_gone, end=end
                 )
                 if swept.requeued or swept.timed_out or swept.given_up:
                     logger.warning("%s", swept)

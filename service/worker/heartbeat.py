@@ -6,7 +6,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from datetime import timedelta
+from datetime import datetime, timedelta
 
 from sqlalchemy.exc import SQLAlchemyError
 
@@ -32,10 +32,18 @@ def leave_process() -> None:
 class Heartbeat(threading.Thread):
     """Looks every 0.4 s, so that a cancelled job stops within a second; renews every quarter of a lease."""
 
-    def __init__(self, settings: Settings, database: Database, *, leave: Callable[[], None] = leave_process) -> None:
+    def __init__(
+        self,
+        settings: Settings,
+        database: Database,
+        *,
+        clock: Callable[[], datetime] = utc_now,
+        leave: Callable[[], None] = leave_process,
+    ) -> None:
         super().__init__(name="heartbeat", daemon=True)
         self._settings = settings
         self._database = database
+        self._clock = clock
         self._leave = leave
         self._claim: Claim | None = None
         self._renewed = 0.0
@@ -86,7 +94,7 @@ class Heartbeat(threading.Thread):
             logger.warning("could not renew the lease of job %s: %s", claim.job_id, error)
 
     def _renew(self, claim: Claim, progress: tuple[str, int, int] | None) -> None:
-        lease_until = utc_now() + timedelta(seconds=self._settings.lease_seconds)
+        lease_until = self._clock() + timedelta(seconds=self._settings.lease_seconds)
         with self._database.write() as connection:
             leases.renew(connection, claim.job_id, claim.token, lease_until=lease_until, progress=progress)
 

@@ -4,7 +4,6 @@ import gc
 import logging
 import sys
 
-import psycopg
 import threadpoolctl
 
 from service.core.analysis import analyse
@@ -39,9 +38,6 @@ def work(settings: Settings, *, parent: int | None = None) -> int:
         transport = open_transport(settings)
     except LeastbendError as error:
         logger.error("%s", error.message)
-        return EXIT_UNUSABLE
-    except psycopg.Error as error:
-        logger.error("the queue's database does not answer: %s", error)
         return EXIT_UNUSABLE
     transport.close()  # each process opens its own
     warm_up()
