@@ -61,7 +61,7 @@ def main() -> int:
     with tempfile.TemporaryDirectory() as directory:
         for engine, settings in _engines(Path(directory)):
             with settings as made, running(made) as service:
-                crowd(service.database, asked.jobs)
+                crowd(service.database, asked.jobs, analyse=service.database.postgres)  # SQLite does not by itself
                 print(f"\n{engine}, {asked.jobs} jobs: milliseconds of {ROUNDS}, whole page")
                 print(f"{'asked':44} {'median':>8} {'worst':>8} {'rows':>5}")
                 for name, query in ASKED.items():

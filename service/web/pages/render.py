@@ -50,4 +50,5 @@ def render(
     """`page` under its field names, with who looks and the token that forms carry."""
     values = {one.name: getattr(page, one.name) for one in fields(page)}
     html = environment().get_template(template).render(caller=caller, form_token=form_token, **values)
-    return HTMLResponse(html, status_code=status, headers=headers)
+    # Under no-referrer, which other answers carry, browsers send forms with `Origin: null`, and that is refused.
+    return HTMLResponse(html, status_code=status, headers={"Referrer-Policy": "same-origin", **(headers or {})})
