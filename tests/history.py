@@ -91,6 +91,7 @@ FILTERS: dict[str, JobFilter] = {
     "state": JobFilter(state=State.FAILED),
     "verdict": JobFilter(verdict="undecided"),
     "submitter": JobFilter(submitted_by="rare"),
+    "submitter, succeeded": JobFilter(submitted_by="rare", state=State.SUCCEEDED),
     "since": JobFilter(since=datetime.fromisoformat(MONTHS_AGO + "T00:00:00+00:00")),
     "until": JobFilter(until=datetime.fromisoformat(MONTHS_AGO + "T00:00:00+00:00")),
 }

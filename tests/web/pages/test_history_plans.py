@@ -14,6 +14,7 @@ INDEX = {
     "state": ("ix_jobs_state_id",),
     "verdict": ("ix_jobs_verdict_id",),
     "submitter": ("ix_jobs_submitted_by_id", "ix_jobs_submitter_turn"),
+    "submitter, succeeded": ("ix_jobs_submitted_by_id",),
     "since": ("sqlite_autoindex_jobs_1", "pk_jobs"),
     "until": ("sqlite_autoindex_jobs_1", "pk_jobs"),
 }
