@@ -5,9 +5,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.polynomial import chebyshev
 
+from service.core.basis import grid_over
 from service.core.curve import derivative, to_t
 from service.core.findings import Findings
-from service.core.nested import GRID, NestedFits
+from service.core.nested import NestedFits
 from service.core.observations import Floats
 from service.core.requirements import allowed_error
 
@@ -40,7 +41,7 @@ def bend_limits(found: Findings) -> list[BendLimit]:
     mpe = asked.max_permissible_error
     if mpe is None and asked.max_unseen_bend is None:
         return []
-    grid = np.linspace(found.working_range[0], found.working_range[1], GRID)
+    grid = grid_over(found.working_range)
     limits: list[BendLimit] = []
     if mpe is not None and (mpe.of == "y" or found.monotonic):
         pointwise = mpe.kind == "percent_of_value"

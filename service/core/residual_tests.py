@@ -9,7 +9,8 @@ import numpy as np
 from scipy import special, stats
 from statsmodels.stats.stattools import jarque_bera
 
-from service.core.nested import NestedFits, basis, reduced_qr
+from service.core.basis import basis
+from service.core.nested import NestedFits, reduced_qr
 from service.core.observations import Floats, Integers, Observations
 from service.core.result import Statistic
 from service.core.tails import chi2_tail, f_tail

@@ -4,7 +4,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from service.core.nested import GRID, NestedFits
+from service.core.basis import grid_over
+from service.core.nested import NestedFits
 from service.core.observations import Floats
 from service.core.result import UnseenBend, UnseenTerm
 from service.core.tails import t_quantile, z_quantile
@@ -54,7 +55,7 @@ def unseen_bend(
     if working_range == fits.domain:
         on_grid = fits.orthonormal_on_grid()
     else:
-        on_grid = fits.orthonormal_at(np.linspace(working_range[0], working_range[1], GRID)).T
+        on_grid = fits.orthonormal_at(grid_over(working_range)).T
     shapes = np.abs(on_grid).max(axis=1)
     for j in range(degree + 1, min(degree + TERMS, fits.top) + 1):
         column = fits.columns(j) - 1

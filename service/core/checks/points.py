@@ -2,8 +2,8 @@
 
 import numpy as np
 
+from service.core.basis import grid_over
 from service.core.findings import Findings
-from service.core.nested import GRID
 from service.core.result import Evidence, Warning
 
 OUTLIER = 0.01
@@ -171,6 +171,6 @@ def _widest_freedom(found: Findings, degree: int) -> tuple[float, float]:
     """The levels on both sides of the place where a degree's prediction variance is largest."""
     fits, level_x = found.full, found.observations.level_x
     shapes = fits.orthonormal_on_grid()[: fits.columns(degree)]
-    at = np.linspace(*fits.domain, GRID)[int(np.argmax(np.einsum("ij,ij->j", shapes, shapes)))]
+    at = grid_over(fits.domain)[int(np.argmax(np.einsum("ij,ij->j", shapes, shapes)))]
     above = min(max(int(np.searchsorted(level_x, at, side="right")), 1), level_x.size - 1)
     return float(level_x[above - 1]), float(level_x[above])
