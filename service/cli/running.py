@@ -13,6 +13,7 @@ from service.logs import log_as_json
 from service.settings import Settings
 from service.web.app import create_app
 from service.web.callers import is_loopback
+from service.web.server import Server
 from service.worker.main import work
 from service.worker.supervise import Companion
 from service.workflows.callers import list_keys
@@ -53,7 +54,7 @@ def serve(asked: dict[str, Any]) -> int:
         print(f"{SAID_WHEN_UP}http://{shown}:{port} with {settings.workers} worker processes", flush=True)
         if not guarded:
             print("There are no keys: it answers this machine only (`leastbend keys create` makes one)", flush=True)
-        uvicorn.Server(config).run(sockets=[listener])
+        Server(config, app).run(sockets=[listener])
     return 0
 
 

@@ -19,6 +19,7 @@ B = TypeVar("B", bound=Body)
 LARGE = 64 * 1024  # parsed in a thread, so that the event loop goes on
 MOST_ERRORS = 20
 LONGEST_KEY = 200  # shown in a pointer
+KEY = "[key]"  # pydantic's word for the key itself, which RFC 6901 cannot point at
 
 
 class UnsupportedType(InvalidInput):
@@ -117,7 +118,9 @@ def field_errors(found: Sequence[Any], *, strip: int = 0) -> list[FieldError]:
 
 def pointer(location: Sequence[Any]) -> str:
     """RFC 6901; a key that nobody could mean is cut short."""
-    return "".join("/" + str(part)[:LONGEST_KEY].replace("~", "~0").replace("/", "~1") for part in location)
+    return "".join(
+        "/" + str(part)[:LONGEST_KEY].replace("~", "~0").replace("/", "~1") for part in location if part != KEY
+    )
 
 
 def _words(error: Any) -> str:

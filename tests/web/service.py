@@ -3,13 +3,17 @@
 import threading
 from collections.abc import Iterator
 from contextlib import contextmanager
+from typing import cast
 
 import httpx
 import uvicorn
+from fastapi import FastAPI
 
 from service.settings import Settings
 from service.store.database import Database, open_database
 from service.web.app import create_app
+from service.web.context import Context
+from service.web.server import Server
 from service.worker.desk import Desk
 from service.worker.heartbeat import Heartbeat
 from service.workflows.provenance import this_machine
@@ -18,13 +22,19 @@ from service.workflows.provenance import this_machine
 class Service:
     """What a test needs of a running service."""
 
-    def __init__(self, settings: Settings, address: str, database: Database) -> None:
+    def __init__(self, settings: Settings, address: str, database: Database, app: FastAPI) -> None:
         self.settings = settings
+        self.app = app
         self.address = address
         self.database = database
         self.http = httpx.Client(base_url=address, timeout=60)
         heartbeat = Heartbeat(settings, database)
         self.desk = Desk(settings, database, heartbeat, this_machine(), worker="desk of the test")
+
+    @property
+    def context(self) -> Context:
+        """What its routes work with."""
+        return cast(Context, self.app.state.context)
 
     def work(self) -> int:
         """Run every job that waits, here and now; answers how many."""
@@ -55,8 +65,11 @@ class Service:
 @contextmanager
 def running(settings: Settings) -> Iterator[Service]:
     """The service listens on a free port until the block ends."""
-    config = uvicorn.Config(create_app(settings), host="127.0.0.1", port=0, log_level="warning", access_log=False)
-    server = uvicorn.Server(config)
+    app = create_app(settings)
+    config = uvicorn.Config(
+        app, host="127.0.0.1", port=0, log_level="warning", access_log=False, backlog=2048, timeout_graceful_shutdown=5
+    )
+    server = Server(config, app)
     thread = threading.Thread(target=server.run)
     thread.start()
     try:
@@ -66,7 +79,7 @@ def running(settings: Settings) -> Iterator[Service]:
             threading.Event().wait(0.01)
         port = server.servers[0].sockets[0].getsockname()[1]
         database = open_database(settings, durable=False)
-        service = Service(settings, f"http://127.0.0.1:{port}", database)
+        service = Service(settings, f"http://127.0.0.1:{port}", database, app)
         yield service
         service.http.close()
         database.close()

@@ -14,6 +14,7 @@ from service.web.callers import CallerDep
 from service.web.context import Ctx
 from service.web.problems import documented
 from service.web.schemas.common import Identifier
+from service.web.waiting import Stopping
 from service.workflows.callers import Caller
 from service.workflows.read import read_events
 
@@ -74,7 +75,10 @@ async def get_job_events(
             if job.stage is not None:
                 progress = {"stage": job.stage, "done": job.stage_done, "of": job.stage_of}
                 yield ServerSentEvent(data=progress, event="progress")
-            await changes.next()
+            try:
+                await changes.next()
+            except Stopping:  # the caller's library connects again, with Last-Event-ID
+                return
 
 
 def _data(event: EventRecord) -> dict[str, Any]:

@@ -60,7 +60,7 @@ async def post_job(
     preferred = preferences(request.headers.getlist("prefer"))
     seconds = seconds_to_wait(preferred, most=context.settings.wait_seconds)
     if seconds:
-        await context.waiting.until_ended(job_id, seconds)
+        await context.waiting.until_ended(job_id, seconds, gone=request.receive)
     detail, notification = await run_in_threadpool(read_job, context.database, caller, job_id)
     ended = detail.job.state in FINAL
     headers = {"Location": f"/v1/jobs/{job_id}"}

@@ -4,13 +4,25 @@ from datetime import datetime
 from typing import Annotated, Any
 
 import numpy as np
-from pydantic import Field
+from pydantic import Field, WithJsonSchema
 
 from service.store.clock import rfc3339
 from service.store.records import DatasetContent, DatasetRecord
-from service.web.schemas.common import Answer, Body, Finite, Label, Line, Moment, given
+from service.web.schemas.common import NO_CONTROLS, Answer, Body, Finite, Label, Line, Moment, given
 
 Column = Annotated[list[Finite], Field(min_length=3)]
+# Written out: what pydantic writes for keys with a pattern lets other keys through.
+Tags = Annotated[
+    dict[Label, Line],
+    WithJsonSchema(
+        {
+            "type": "object",
+            "maxProperties": 50,
+            "propertyNames": {"type": "string", "minLength": 1, "maxLength": 200, "pattern": NO_CONTROLS},
+            "additionalProperties": {"type": "string", "maxLength": 500, "pattern": NO_CONTROLS},
+        }
+    ),
+]
 DETAILS = (
     "title",
     "x_quantity",
@@ -45,7 +57,7 @@ class DatasetBody(Body):
         None, description="Points whose x differ by no more than this count as one level; absent: equal x only."
     )
     measured_at: Moment | None = Field(None, description="When it was measured, with time zone (RFC 3339).")
-    tags: dict[Label, Line] | None = Field(None, max_length=50, description="Anything else worth keeping.")
+    tags: Tags | None = Field(None, max_length=50, description="Anything else worth keeping.")
 
     def content(self) -> DatasetContent:
         """The same as the store keeps it."""

@@ -37,6 +37,7 @@ RULES = re.compile(
             r"the weights .* have no value",
             r'is "u_y", but the dataset gives no u_y',
             r"needs u_y",
+            r"needs weights \"auto\" or \"u_y\"",
             r"shares no more than one value of x with the data",
             r"holds? (no|only|fewer)",
             # of text with its meaning
