@@ -1,23 +1,21 @@
-"""Canonical JSON (RFC 8785), fast: the standard library's encoder, put right where its numbers differ.
+"""Canonical JSON (RFC 8785), fast: the standard library's encoder, given numbers that it writes as the RFC does.
 
-Python writes 1.0, 1e-05 and 1e+16 where RFC 8785 (that is, ECMAScript) writes 1, 0.00001 and 10000000000000000.
-Everything else is the same (escapes, separators, order of keys) for text below U+D800, where the order of code points
-is that of UTF-16 units. Whatever may not be is left to the `rfc8785` package, which also says what is wrong.
+Python writes 1.0, 1e-05 and 1e+16 where RFC 8785 (that is, ECMAScript) writes 1, 0.00001 and 10000000000000000. So
+whole numbers are handed over as integers, and the few floats with an exponent as marked strings, whose marks and quotes
+are taken off afterwards. Everything else is the same (escapes, separators, and the order of keys for text below U+D800,
+where code points sort as UTF-16 units do). What is no case for this is left to the `rfc8785` package, which also says
+what is wrong.
 """
 
 import json
-import re
 from typing import Any
 
 import rfc8785
 
-# Strings are matched only to be passed over; of numbers, those that end in .0, have an exponent or are long integers.
-ODD = re.compile(
-    r'"[^"\\]*+(?:\\.[^"\\]*+)*+"'
-    r"|(?<![\d.])-?\d++(?:\.0(?!\d)|(?:\.\d++)?e[+-]\d+)"
-    r"|(?<![\d.])-?\d{16,}+(?![.e])"
-)
+OPEN, CLOSE = "\ue000", "\ue001"  # private use: no one writes them, and where somebody does the package is asked
 SURROGATES = "\ud800"
+WHOLE = 2.0**53
+LEAST, MOST = 1e-4, 1e16  # between them repr() needs no exponent
 
 
 class _Beyond(Exception):
@@ -27,20 +25,47 @@ class _Beyond(Exception):
 def canonical(value: Any) -> bytes:
     """Canonical JSON of plain Python values. Raises ValueError for NaN and infinities."""
     try:
-        text = json.dumps(value, ensure_ascii=False, allow_nan=False, sort_keys=True, separators=(",", ":"))
-        if text.isascii() or max(text) < SURROGATES:
-            return ODD.sub(_as_ecmascript, text).encode()
+        return _fast(value)
     except (TypeError, ValueError, _Beyond):
-        pass
-    return rfc8785.dumps(value)
+        return rfc8785.dumps(value)
 
 
-def _as_ecmascript(match: re.Match[str]) -> str:
-    token = match[0]
-    if token[0] == '"':
-        return token
-    if token.endswith(".0"):
-        return "0" if token == "-0.0" else token[:-2]
-    if "e" in token:
-        return rfc8785.dumps(float(token)).decode("ascii")
-    raise _Beyond
+def _fast(value: Any) -> bytes:
+    numbers = _Numbers()
+    ready = numbers.replaced(value)
+    text = json.dumps(ready, ensure_ascii=False, allow_nan=False, sort_keys=True, separators=(",", ":"))
+    if numbers.marked:
+        if text.count(OPEN) != numbers.marked or text.count(CLOSE) != numbers.marked:
+            raise _Beyond
+        text = text.replace(f'"{OPEN}', "").replace(f'{CLOSE}"', "")
+    if not text.isascii() and max(text) >= SURROGATES:
+        raise _Beyond
+    return text.encode()
+
+
+class _Numbers:
+    """Replaces the numbers of a document that Python writes differently."""
+
+    def __init__(self) -> None:
+        self.marked = 0
+
+    def replaced(self, item: Any) -> Any:
+        """The item with its numbers ready for the standard encoder."""
+        kind = type(item)
+        if kind is float:
+            return self._number(item)
+        if kind is dict:
+            return {key: self.replaced(one) for key, one in item.items()}
+        if kind is list or kind is tuple:
+            return [self.replaced(one) for one in item]
+        if kind is int and not -WHOLE < item < WHOLE:
+            raise _Beyond
+        return item
+
+    def _number(self, number: float) -> Any:
+        if LEAST <= number < MOST or -MOST < number <= -LEAST:
+            return int(number) if number.is_integer() else number
+        if number == 0:
+            return 0
+        self.marked += 1
+        return f"{OPEN}{rfc8785.dumps(number).decode()}{CLOSE}"

@@ -5,7 +5,8 @@ the default plan and wait for each acknowledgement, which is durable. The time i
 outcome. The same with workers whose analysis is one ready result is the ceiling. With a PostgreSQL URL (of a server
 on which databases can be made) also: a queue filled beforehand, emptied by one worker process and by two.
 
-The figures are of the machine and of whatever else it does; their ratios, taken in one run, are what to compare.
+The figures are of the machine and of whatever else it does; their ratios, taken in one run, are what to compare. On a
+machine that does other work, processor time says what two processors of its own would do.
 """
 
 import argparse
@@ -64,10 +65,13 @@ def main() -> None:
 
 def embedded(settings: Settings, module: str, count: int) -> float:
     """Jobs a second from the first post to the last outcome."""
-    with api(settings) as port, Workers(settings, module=module):
+    with api(settings) as (port, pid), Workers(settings, module=module) as workers:
         post(port, 20, seed=10**6)  # everything is loaded and connected
         database = open_database(settings, durable=False)
         wait_for(database, 20)
+        processes = {"API": [pid], "workers": [workers.pid, *workers.consumer(), *workers.children()]}
+        used = {name: -cpu_seconds(pids) for name, pids in processes.items()}
+        used["callers"] = -time.process_time()
         began = time.monotonic()
         per_caller = count // CALLERS
         callers = [
@@ -81,14 +85,20 @@ def embedded(settings: Settings, module: str, count: int) -> float:
         acknowledged = time.monotonic() - began
         wait_for(database, 20 + CALLERS * per_caller)
         took = time.monotonic() - began
+        for name, pids in processes.items():
+            used[name] += cpu_seconds(pids)
+        used["callers"] += time.process_time()
         database.close()
+    done = CALLERS * per_caller
+    shares = ", ".join(f"{name} {1e3 * seconds / done:.1f} ms" for name, seconds in used.items())
+    print(f"  processor time of one job: {shares}; two whole processors: {2 * done / sum(used.values()):.0f} jobs/s")
     print(f"  acknowledged at {CALLERS * per_caller / acknowledged:.0f} posts/s")
     return CALLERS * per_caller / took
 
 
 @contextmanager
-def api(settings: Settings) -> Iterator[int]:
-    """The API alone in its own process; its port."""
+def api(settings: Settings) -> Iterator[tuple[int, int]]:
+    """The API alone in its own process; its port and process id."""
     command = [
         sys.executable,
         "-c",
@@ -105,11 +115,21 @@ def api(settings: Settings) -> Iterator[int]:
         assert process.stdout is not None
         for line in process.stdout:
             if "http://" in line:
-                yield int(line.split("http://", 1)[1].split("/")[0].split()[0].rsplit(":", 1)[1].rstrip(".,"))
+                address = line.split("http://", 1)[1].split("/")[0].split()[0]
+                yield int(address.rsplit(":", 1)[1].rstrip(".,")), process.pid
                 break
     finally:
         process.terminate()
         process.wait()
+
+
+def cpu_seconds(pids: list[int]) -> float:
+    """User and system time that these processes have used (Linux, proc(5))."""
+    ticks = 0
+    for pid in pids:
+        fields = Path(f"/proc/{pid}/stat").read_text().rsplit(")", 1)[1].split()
+        ticks += int(fields[11]) + int(fields[12])
+    return ticks / os.sysconf("SC_CLK_TCK")
 
 
 def post(port: int, count: int, *, seed: int) -> None:

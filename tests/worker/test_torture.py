@@ -25,6 +25,7 @@ from tests.worker.processes import FIFTY_MILLISECONDS, consumer_of, hands_of, un
 POINTS = 30
 
 
+@pytest.mark.timeout(600)
 @pytest.mark.parametrize(
     ("jobs", "seconds"),
     [pytest.param(150, 10, marks=pytest.mark.long), pytest.param(300, 20, marks=pytest.mark.slow)],
@@ -44,7 +45,7 @@ def test_random_kills(database: Database, transport: Transport, settings: Settin
             ids.append(desk.put(number, points=POINTS, plan=FIFTY_MILLISECONDS, seconds=time.monotonic() - began))
             time.sleep(max(0.0, began + (number + 1) * seconds / jobs - time.monotonic()))
         killer.join()
-        until(lambda: all(desk.job(job_id).state in FINAL for job_id in ids), seconds=120, every=0.2)
+        until(lambda: all(desk.job(job_id).state in FINAL for job_id in ids), seconds=400, every=0.2)
     reruns = check_everything(desk, ids, kills)
     sys.stderr.write(
         f"\n{jobs} jobs, {len(kills)} kills, {len(reruns)} runs again,"
