@@ -1,9 +1,9 @@
-"""Jobs a second: `python -m tests.benchmarks.throughput [--jobs N] [--database-url URL]`.
+"""Jobs a second: `python -m tests.benchmarks.throughput [--jobs N] [--postgresql | --database-url URL]`.
 
 Embedded: the real API in its own process, two worker processes, eight callers that post 30-point datasets inline under
 the default plan and wait for each acknowledgement, which is durable. The time is from the first post to the last
-outcome. The same with workers whose analysis is one ready result is the ceiling. With a PostgreSQL URL (of a server
-on which databases can be made) also: a queue filled beforehand, emptied by one worker process and by two.
+outcome. The same with workers whose analysis is one ready result is the ceiling. On PostgreSQL (a private instance, or
+a server on which databases can be made) also: a queue filled beforehand, emptied by one worker process and by two.
 
 The figures are of the machine and of whatever else it does; their ratios, taken in one run, are what to compare. On a
 machine that does other work, processor time says what two processors of its own would do.
@@ -34,6 +34,7 @@ from service.store.tables import FINAL, jobs
 from service.store.transport import open_transport
 from tests.conftest import one_database
 from tests.jobs import Desk
+from tests.postgres import PrivatePostgres, find_binaries
 from tests.worker.processes import Workers
 
 CALLERS = 8
@@ -46,21 +47,44 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--jobs", type=int, default=1500)
     parser.add_argument("--database-url", help="of a PostgreSQL server on which databases can be made")
+    parser.add_argument("--postgresql", action="store_true", help="on a private instance made for this run")
+    parser.add_argument("--only-postgresql", action="store_true", help="leave out the embedded part")
     asked = parser.parse_args()
     print(f"{os.cpu_count()} processors, load {os.getloadavg()[0]:.1f} before the run, {asked.jobs} jobs each")
+    if not asked.only_postgresql:
+        measure_embedded(asked.jobs)
+    if asked.database_url:
+        measure_postgresql(asked.database_url, asked.jobs)
+    elif asked.postgresql or asked.only_postgresql:
+        binaries = find_binaries()
+        if binaries is None:
+            parser.error("no PostgreSQL binaries here")
+        server = PrivatePostgres(binaries, fsync=True)
+        try:
+            server.start()
+            measure_postgresql(server.url(), asked.jobs)
+        finally:
+            server.remove()
+
+
+def measure_embedded(count: int) -> None:
+    """Real jobs and trivial ones."""
     rates = {}
     for name, module in (("default plan", REAL), ("trivial jobs", TRIVIAL)):
         with tempfile.TemporaryDirectory() as directory:
-            rates[name] = embedded(Settings(data_dir=Path(directory), port=0, log_level="ERROR"), module, asked.jobs)
+            rates[name] = embedded(Settings(data_dir=Path(directory), port=0, log_level="ERROR"), module, count)
         print(f"embedded, {name}: {rates[name]:.0f} jobs/s")
     print(f"of the ceiling: {rates['default plan'] / rates['trivial jobs']:.2f}")
-    if asked.database_url:
-        drained = {}
-        for workers in (1, 2):
-            with one_database(asked.database_url, f"leastbend_bench_{uuid.uuid4().hex[:8]}") as url:
-                drained[workers] = drain(Settings(database_url=url, workers=workers, log_level="ERROR"), asked.jobs)
-            print(f"PostgreSQL, {workers} worker process(es): {drained[workers]:.0f} jobs/s")
-        print(f"two to one: {drained[2] / drained[1]:.2f}")
+
+
+def measure_postgresql(server: str, count: int) -> None:
+    """One worker process and two."""
+    drained = {}
+    for workers in (1, 2):
+        with one_database(server, f"leastbend_bench_{uuid.uuid4().hex[:8]}") as url:
+            drained[workers] = drain(Settings(database_url=url, workers=workers, log_level="ERROR"), count)
+        print(f"PostgreSQL, {workers} worker process(es): {drained[workers]:.0f} jobs/s")
+    print(f"two to one: {drained[2] / drained[1]:.2f}")
 
 
 def embedded(settings: Settings, module: str, count: int) -> float:
