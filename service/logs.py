@@ -17,7 +17,7 @@ def log_as_json(level: str) -> None:
     logging.basicConfig(handlers=[handler], level=level, force=True)
     if level != "DEBUG":
         for chatty in ("huey", "alembic", "httpx", "httpcore", "matplotlib", "uvicorn.error"):
-            logging.getLogger(chatty).setLevel(logging.WARNING)
+            logging.getLogger(chatty).setLevel(max(logging.WARNING, logging.getLevelNamesMapping()[level]))
     for own in ("uvicorn", "uvicorn.error", "uvicorn.access"):
         logging.getLogger(own).handlers.clear()
         logging.getLogger(own).propagate = True

@@ -2,7 +2,6 @@
 
 import gc
 import logging
-import sys
 
 import threadpoolctl
 
@@ -10,6 +9,7 @@ from service.core.analysis import analyse
 from service.core.observations import observe
 from service.core.plan import Plan
 from service.errors import LeastbendError
+from service.logs import log_as_json
 from service.settings import Settings
 from service.store.codec import result_document
 from service.store.database import open_database
@@ -28,7 +28,7 @@ def work(settings: Settings, *, parent: int | None = None) -> int:
     """Work until SIGTERM or SIGINT; answers the exit status. With `parent`, all processes die when it does."""
     if parent is not None:
         die_with(parent)
-    _log_to_stderr(settings)
+    log_as_json(settings.log_level)
     # One thread each: the processes are the parallelism, and sums come out the same however busy the machine is.
     threadpoolctl.threadpool_limits(1)
     try:
@@ -51,12 +51,3 @@ def warm_up() -> None:
     result_document(analyse(observe(x, y), Plan()))
     gc.collect()
     gc.freeze()  # shared pages stay shared
-
-
-def _log_to_stderr(settings: Settings) -> None:
-    logging.basicConfig(
-        stream=sys.stderr, level=settings.log_level, format="%(asctime)s %(levelname)s %(process)d %(name)s %(message)s"
-    )
-    if settings.log_level != "DEBUG":
-        logging.getLogger("huey").setLevel(logging.WARNING)
-        logging.getLogger("alembic").setLevel(logging.WARNING)
