@@ -89,6 +89,8 @@ STEPS = (
          path={"job_id": "{post_job/queued}", "name": "curve"}),
     Step(operation="get_figure_png", case="degrees", summary="Cross-validation error of each degree",
          path={"job_id": "{post_job/queued}", "name": "degrees"}),
+    Step(operation="get_report", case="two_pages", summary="The report of a job",
+         path={"job_id": "{post_job/queued}"}),
     Step(operation="post_job", case="waited_for", summary="Dataset inline, answered when the job has ended",
          headers={"Prefer": "wait=30"}, body={"dataset": BOWED}, live=True),
     Step(operation="post_job", case="unknown_key", summary="The plan has a key that is not known",
@@ -180,7 +182,7 @@ def answer_of(summary: str, response: httpx.Response) -> dict[str, Any]:
     answer: dict[str, Any] = {"summary": summary, "status": response.status_code}
     answer["headers"] = {name: response.headers[name] for name in HEADERS if name in response.headers}
     kind = response.headers.get("content-type", "").split(";")[0]
-    if kind.startswith("image/"):  # tests/web/figures looks at what is drawn
+    if kind.startswith("image/") or kind == "application/pdf":  # tests/web/figures and pages look at what is in them
         answer["type"] = kind
     elif response.content:
         answer["type"] = kind
