@@ -5,7 +5,8 @@ from dataclasses import dataclass
 from typing import Any
 
 from service.store.clock import rfc3339
-from service.store.tables import FINAL
+from service.store.records import JobRecord
+from service.store.tables import FINAL, State
 from service.web.context import Context
 from service.web.figures.data import figure_data
 from service.web.figures.names import TITLES, FigureName
@@ -33,7 +34,8 @@ class JobPage:
     """job.html and report.html. `job`: what GET /v1/jobs/{id} answers, from which every number on the page is taken.
 
     `verdict`: what GET /v1/jobs/{id}/verdict answers, with its digest; both None before there is one. `dataset`: as
-    GET /v1/datasets/{id} answers it without points. `events`: kind, time and detail, oldest first.
+    GET /v1/datasets/{id} answers it without points. `events`: kind, time and detail, oldest first. `elapsed`:
+    seconds since a running job started; `longest`: after which it is stopped.
     """
 
     job: dict[str, Any]
@@ -44,6 +46,8 @@ class JobPage:
     figures: list[FigureItem]
     ended: bool
     may_cancel: bool
+    elapsed: float | None
+    longest: float
 
 
 def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureName, ...]) -> JobPage:
@@ -73,4 +77,12 @@ def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureNam
         figures=figures,
         ended=ended,
         may_cancel=not ended and caller.role != "read",
+        elapsed=_elapsed(context, detail.job),
+        longest=context.settings.job_seconds,
     )
+
+
+def _elapsed(context: Context, job: JobRecord) -> float | None:
+    if job.state is not State.RUNNING or job.started_at is None:
+        return None
+    return max(0.0, (context.now() - job.started_at).total_seconds())

@@ -1,11 +1,15 @@
 """Pages without a browser: states, filters, paging, and nothing that the Content-Security-Policy would refuse."""
 
+from datetime import UTC, datetime, timedelta
 from typing import Any
 
 import pytest
+from sqlalchemy import func, select, update
 
 from service.errors import InvalidInput, Overloaded
 from service.store import jobs as store
+from service.store.tables import jobs
+from tests.history import crowd
 from tests.web.examples import BOWED, DATASET, PLAN
 from tests.web.pages.reading import Refused
 from tests.web.service import Service
@@ -82,6 +86,50 @@ def test_a_job_that_waits_says_so_and_can_be_called_off(service: Service):
     service.work()
     assert service.http.get(f"/job/{job}/state").json()["ended"] is True
     assert "Cancel this job" not in service.http.get(f"/job/{job}").text
+
+
+def test_a_long_run_says_how_long_and_how_far(service: Service):
+    job = put(service)
+    now = datetime.now(UTC)
+    running = {
+        "state": "running",
+        "token": "t",
+        "worker": "bench:7",
+        "lease_until": now + timedelta(hours=1),
+        "started_at": now - timedelta(minutes=3),
+        "attempts": 2,
+        "stage": "cross_validate",
+        "stage_done": 40,
+        "stage_of": 100,
+    }
+    with service.database.write() as connection:
+        connection.execute(update(jobs).where(jobs.c.id == job).values(running))
+    page = service.http.get(f"/job/{job}").text
+    assert "It has run for 3 min 0 s, and is stopped after 10 min 0 s." in page
+    assert '<progress max="100" value="40"' in page
+    assert "cross-validates" in page
+    assert "attempt 2" in page
+    assert "bench:7" in service.http.get("/queue").text
+    assert service.http.get(f"/job/{job}/state").json()["progress"] == {
+        "stage": "cross_validate",
+        "done": 40,
+        "of": 100,
+    }
+
+
+def test_ten_thousand_jobs_that_wait(service: Service):
+    crowd(service.database, 10_000, analyse=False)
+    with service.database.write() as connection:
+        busy = (jobs.c.state == "succeeded") & (jobs.c.submitted_by == "line 1")
+        connection.execute(update(jobs).where(busy).values(state="queued", verdict=None, chosen_degree=None))
+        waiting = connection.execute(select(func.count()).where(jobs.c.state == "queued")).scalar_one()
+    page = service.http.get("/queue").text
+    assert f'<dd id="waiting">{waiting}</dd>' in page
+    assert "line 1" in page
+    assert len(page) < 20_000
+    history = service.http.get("/history?state=queued").text
+    assert history.count('<a id="job-') == 50
+    assert len(history) < 60_000
 
 
 def test_a_failed_job_shows_its_error(service: Service, monkeypatch: pytest.MonkeyPatch):
