@@ -9,8 +9,9 @@ from fastapi import Header
 Prefer = Annotated[
     str | None,
     Header(
+        alias="Prefer",
         description="RFC 7240. `wait=N`: answer when the job has ended, or after N seconds. `respond-async`: answer at"
-        " once, or with `wait=N` after that time."
+        " once, or with `wait=N` after that time.",
     ),
 ]
 TOKEN = r"[!#$%&'*+.^_`|~0-9A-Za-z-]+"

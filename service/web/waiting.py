@@ -103,6 +103,11 @@ class Waiting:
         """Number of jobs that somebody waits for."""
         return len(self._watched)
 
+    @property
+    def watchers(self) -> int:
+        """Number of callers who wait."""
+        return sum(len(watching) for watching in self._watched.values())
+
     def release(self) -> None:
         """Let go of everybody who waits, now and from now on: the service is about to stop."""
         self._stopping = True

@@ -58,7 +58,9 @@ async def get_job_events(
     context: Ctx,
     job_id: Identifier,
     caller: Annotated[Caller, Depends(_exists)],
-    last_event_id: Annotated[int, Header(ge=0, le=2**62, description="Go on behind this event.")] = 0,
+    last_event_id: Annotated[
+        int, Header(alias="Last-Event-ID", ge=0, le=2**62, description="Go on behind this event.")
+    ] = 0,
 ) -> AsyncIterator[ServerSentEvent]:
     """Server-sent events: `queued`, `started`, `requeued`, `succeeded`, `failed`, `cancelled` as they are recorded,
     each with an id to go on from, and `progress` in between. The stream ends with the job.

@@ -23,7 +23,7 @@ SHOWN: tuple[FigureName, ...] = ("curve", "degrees", "residuals", "unseen")
     "/{job_id}/report.pdf",
     response_class=Response,
     responses=documented(
-        *(401, 403, 404, 429, 503),
+        *(401, 403, 404, 422, 429, 503),
         also={
             200: {"description": "The report, A4", "content": {PDF: {"schema": {"type": "string"}}}},
             304: {"description": "Not changed since the ETag given in If-None-Match"},

@@ -48,7 +48,7 @@ def check(directory: Path, *options: str, least: int, seconds: int) -> None:
 @pytest.mark.long
 @pytest.mark.timeout(1200)
 def test_five_thousand_requests(tmp_path: Path) -> None:
-    check(tmp_path, "--max-examples", "150", "--seed", "20260504", "--workers", "2", least=5_000, seconds=1100)
+    check(tmp_path, "--max-examples", "220", "--seed", "20260504", "--workers", "2", least=5_000, seconds=1100)
 
 
 @pytest.mark.slow
