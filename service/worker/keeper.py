@@ -25,10 +25,11 @@ def keep(consume: Callable[[], None]) -> int:
 
     def stop(number: int, _frame: Any) -> None:
         nonlocal stopping
-        stopping = True
-        if child:
-            # A terminal signals the whole group itself; SIGTERM on top of that changes nothing.
+        if child and not stopping:
+            # Once: to the consumer a second signal of one kind means not to wait. A terminal's SIGINT goes to the whole
+            # group, and the API's companion sends SIGTERM on top of it.
             os.kill(child, signal.SIGTERM if number == signal.SIGINT else number)
+        stopping = True
 
     for number in STOPPING:
         signal.signal(number, stop)

@@ -39,6 +39,7 @@ class Workers:
         """Start (again)."""
         self.process = subprocess.Popen(
             self._command,
+            start_new_session=True,
             env={**os.environ, **self._settings.environment(), **ONE_THREAD, "LEASTBEND_LOG_LEVEL": "ERROR"},
         )
 
@@ -66,7 +67,7 @@ class Workers:
         """Ask it to stop; its exit status."""
         assert self.process is not None
         self.process.send_signal(how)
-        return self.process.wait(60)
+        return self.process.wait(180)
 
 
 def children_of(pid: int) -> list[int]:

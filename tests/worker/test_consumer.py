@@ -54,6 +54,17 @@ def test_jobs_run_and_a_graceful_stop_finishes_what_runs(brisk: Desk) -> None:
     assert all("requeued" not in brisk.history(job_id) for job_id in last)
 
 
+def test_a_terminals_signal_and_the_companions_after_it_are_one_graceful_stop(brisk: Desk) -> None:
+    job_id = brisk.put(**LONG_JOB)
+    with Workers(quick(brisk.settings, stop_seconds=150)) as workers:
+        until(lambda: running(brisk, job_id))
+        os.killpg(workers.pid, signal.SIGINT)
+        until(lambda: brisk.job(job_id).stage is not None)
+        assert workers.stop() == 0
+    assert brisk.job(job_id).state == State.SUCCEEDED
+    assert brisk.history(job_id) == ["queued", "started", "succeeded"]
+
+
 def test_a_job_too_long_for_a_graceful_stop_is_handed_back_uncounted(brisk: Desk) -> None:
     settings = quick(brisk.settings, stop_seconds=0.5)
     job_id = brisk.put(**LONG_JOB)
