@@ -173,7 +173,7 @@ def test_demo_ends_with_verdicts(tmp_path: Path) -> None:
         "SM-LV-05": (2, "inadequate"),
     }
     assert "not_monotonic (serious)" in done.stdout
-    assert "suspect_point (caution)" in done.stdout
+    assert "suspect_point (serious)" in done.stdout
 
 
 @pytest.mark.parametrize(
