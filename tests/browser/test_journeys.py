@@ -161,6 +161,16 @@ def test_without_scripts_everything_is_there(service: Service, open_page: Opener
     assert "degree 2, quadratic" in page.locator("h2").first.inner_text()
 
 
+def test_a_figure_opened_by_itself_is_drawn_with_its_styles(service: Service, open_page: Opener):
+    job = put(service)
+    service.work()
+    page = open_page(service)
+    page.goto(f"/v1/jobs/{job}/figures/curve.svg")
+    line = page.evaluate("getComputedStyle(document.querySelector('#curve path')).stroke")
+    assert line == "rgb(20, 89, 107)"
+    assert page.evaluate("document.querySelector('desc').textContent").startswith("10 points of y against x")
+
+
 def tab_to(page: Page, element: str, *, most: int = 60) -> None:
     """Press Tab until the element with this id has the focus."""
     for _ in range(most):

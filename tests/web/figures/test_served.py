@@ -1,5 +1,7 @@
 """Figures and report over HTTP: drawn once, kept, conditional, and only for who may see the job."""
 
+import subprocess
+import sys
 from datetime import UTC, datetime
 
 import pytest
@@ -89,3 +91,9 @@ def test_only_who_may_see_the_job_gets_its_figures(service: Service):
         assert statuses == [401, 404, 200]
     # A figure that is kept is no way around it either.
     assert service.http.get(SVG.format(job), headers={"Authorization": f"Bearer {keys['submit']}"}).status_code == 404
+
+
+def test_a_service_that_draws_nothing_loads_nothing_to_draw_with():
+    ask = "import sys, service.web.app; print([m for m in ('matplotlib', 'reportlab', 'PIL') if m in sys.modules])"
+    found = subprocess.run([sys.executable, "-c", ask], capture_output=True, text=True, check=True)
+    assert found.stdout.strip() == "[]"
