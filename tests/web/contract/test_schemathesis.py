@@ -6,6 +6,7 @@ import subprocess
 import sys
 from pathlib import Path
 
+import httpx
 import pytest
 
 from tests.web.real import Real, make_key, real_service
@@ -36,6 +37,7 @@ def check(directory: Path, *options: str, least: int, seconds: int) -> None:
     """No failure, at least so many requests, no status of 500 or more, no traceback in the log."""
     key = make_key(directory, "contract", "admin")
     with real_service(directory, "--workers", "2", requests_per_minute="0") as real:
+        httpx.get(f"{real.address}/openapi.json", timeout=120).raise_for_status()  # made at the first call
         report = run(real, key, *options, seconds=seconds)
         log, answers = real.log(), real.answers()
     operations = re.search(r"Tested: (\d+)", report)

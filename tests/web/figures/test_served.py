@@ -93,6 +93,21 @@ def test_only_who_may_see_the_job_gets_its_figures(service: Service):
     assert service.http.get(SVG.format(job), headers={"Authorization": f"Bearer {keys['submit']}"}).status_code == 404
 
 
+def test_words_are_kept_but_not_for_strangers(service: Service, monkeypatch: pytest.MonkeyPatch):
+    first, second = put(service), put(service)
+    service.work()
+    monkeypatch.setattr(desk, "MOST_WORDS", 1)
+    page = service.http.get(f"/job/{first}").text
+    monkeypatch.setattr(desk, "figure_inputs", None)  # nothing is gathered again
+    assert service.http.get(f"/job/{first}").text.count('alt="10 points of') == page.count('alt="10 points of') == 1
+    monkeypatch.undo()
+    monkeypatch.setattr(desk, "MOST_WORDS", 1)
+    service.http.get(f"/job/{second}").raise_for_status()
+    monkeypatch.setattr(desk, "figure_inputs", None)
+    assert service.http.get(f"/job/{second}").status_code == 200
+    assert service.http.get(f"/job/{first}").status_code == 500  # forgotten for the second, as told
+
+
 def test_a_service_that_draws_nothing_loads_nothing_to_draw_with():
     ask = "import sys, service.web.app; print([m for m in ('matplotlib', 'reportlab', 'PIL') if m in sys.modules])"
     found = subprocess.run([sys.executable, "-c", ask], capture_output=True, text=True, check=True)
