@@ -8,14 +8,11 @@ from service.store.clock import rfc3339
 from service.store.records import JobRecord
 from service.store.tables import FINAL, State
 from service.web.context import Context
-from service.web.figures.data import figure_data
 from service.web.figures.names import TITLES, FigureName
-from service.web.figures.words import alt_text
 from service.web.pages import words
 from service.web.schemas.datasets import dataset_view
 from service.web.schemas.jobs import job_document
 from service.workflows.callers import Caller
-from service.workflows.figures import figure_inputs
 from service.workflows.read import read_dataset, read_events, read_job, read_verdict
 
 
@@ -58,11 +55,9 @@ def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureNam
     figures: list[FigureItem] = []
     verdict, digest = None, None
     if detail.result is not None:
-        content, _ = figure_inputs(context.database, caller, job_id)
-        data = figure_data(content, subject=detail.job.subject, plan=detail.plan, result=detail.result)
+        said = context.drawing.words(caller, job_id)
         figures = [
-            FigureItem(name=name, title=TITLES[name], alt=alt_text(name, data), reading=words.FIGURES[name])
-            for name in shown
+            FigureItem(name=name, title=TITLES[name], alt=said[name], reading=words.FIGURES[name]) for name in shown
         ]
         found = read_verdict(context.database, caller, job_id)
         verdict, digest = json.loads(found.document), found.digest

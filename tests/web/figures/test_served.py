@@ -10,6 +10,7 @@ from sqlalchemy import select
 from service.store.tables import figures
 from service.web.figures import desk
 from service.workflows.callers import create_key
+from service.workflows.figures import figure_inputs
 from tests.web.examples import BOWED
 from tests.web.service import Service
 
@@ -93,19 +94,20 @@ def test_only_who_may_see_the_job_gets_its_figures(service: Service):
     assert service.http.get(SVG.format(job), headers={"Authorization": f"Bearer {keys['submit']}"}).status_code == 404
 
 
-def test_words_are_kept_but_not_for_strangers(service: Service, monkeypatch: pytest.MonkeyPatch):
+def test_words_are_gathered_once_for_the_jobs_last_looked_at(service: Service, monkeypatch: pytest.MonkeyPatch):
     first, second = put(service), put(service)
     service.work()
+    gathered = []
+
+    def counting(database, caller, job_id):
+        gathered.append(job_id)
+        return figure_inputs(database, caller, job_id)
+
     monkeypatch.setattr(desk, "MOST_WORDS", 1)
-    page = service.http.get(f"/job/{first}").text
-    monkeypatch.setattr(desk, "figure_inputs", None)  # nothing is gathered again
-    assert service.http.get(f"/job/{first}").text.count('alt="10 points of') == page.count('alt="10 points of') == 1
-    monkeypatch.undo()
-    monkeypatch.setattr(desk, "MOST_WORDS", 1)
-    service.http.get(f"/job/{second}").raise_for_status()
-    monkeypatch.setattr(desk, "figure_inputs", None)
-    assert service.http.get(f"/job/{second}").status_code == 200
-    assert service.http.get(f"/job/{first}").status_code == 500  # forgotten for the second, as told
+    monkeypatch.setattr(desk, "figure_inputs", counting)
+    pages = [service.http.get(f"/job/{job}").text for job in (first, first, second, first)]
+    assert pages[0].count('alt="10 points of') == pages[1].count('alt="10 points of') == 1
+    assert gathered == [first, second, first]
 
 
 def test_a_service_that_draws_nothing_loads_nothing_to_draw_with():
