@@ -3,7 +3,8 @@
 from dataclasses import dataclass
 from datetime import datetime
 
-from sqlalchemy import Connection, Select, func, insert, select
+from sqlalchemy import Connection, Select, func, select
+from sqlalchemy.dialects.postgresql import insert
 
 from service.store.clock import new_id
 from service.store.records import Page
@@ -37,8 +38,13 @@ def latest(connection: Connection, name: str) -> NamedPlan | None:
     return None if row is None else NamedPlan(**row)
 
 
-def add(connection: Connection, *, name: str, version: int, plan_digest: str, created_by: str, now: datetime) -> str:
-    """A new version; its id. The plan itself is stored already."""
+def add(
+    connection: Connection, *, name: str, version: int, plan_digest: str, created_by: str, now: datetime
+) -> str | None:
+    """A new version; its id, or None if another caller took this number meanwhile. The plan itself is stored already.
+
+    On PostgreSQL the second of two callers waits here until the first commits.
+    """
     plan_id = new_id()
     row = {
         "id": plan_id,
@@ -48,8 +54,9 @@ def add(connection: Connection, *, name: str, version: int, plan_digest: str, cr
         "created_by": created_by,
         "created_at": now,
     }
-    connection.execute(insert(named_plans), row)
-    return plan_id
+    taking = insert(named_plans).on_conflict_do_nothing(index_elements=["name", "version"])
+    taken = connection.execute(taking.returning(named_plans.c.id), row).scalar()
+    return None if taken is None else plan_id
 
 
 def find(connection: Connection, plan_id: str) -> NamedPlan | None:

@@ -3,7 +3,7 @@
 from datetime import datetime
 
 from service.core.plan import Plan
-from service.errors import InvalidInput, NotFound
+from service.errors import InvalidInput, NotFound, Overloaded
 from service.store import named_plans, plans
 from service.store.codec import digest, plan_document, read_plan
 from service.store.database import Database
@@ -12,27 +12,31 @@ from service.store.records import Page
 from service.workflows.callers import Caller
 
 
+TRIES = 100  # each time another caller has taken the number
+
+
 def post_plan(database: Database, caller: Caller, name: str, plan: Plan, *, now: datetime) -> tuple[NamedPlan, bool]:
     """The newest version of this name, and whether it was made now: the same plan again makes no new version.
 
-    Raises Forbidden.
+    Raises Forbidden, Overloaded.
     """
     caller.must_submit()
     document = plan_document(plan)
     plan_digest = digest(document)
-    with database.write() as connection:
-        plans.store(connection, document, plan_digest, now)
-        latest = named_plans.latest(connection, name)
-        if latest is not None and latest.plan_digest == plan_digest:
-            return latest, False
-        version = 1 if latest is None else latest.version + 1
-        plan_id = named_plans.add(
-            connection, name=name, version=version, plan_digest=plan_digest, created_by=caller.name, now=now
-        )
-        made = named_plans.find(connection, plan_id)
-    if made is None:
-        raise NotFound("the plan is gone")
-    return made, True
+    for _ in range(TRIES):
+        with database.write() as connection:
+            plans.store(connection, document, plan_digest, now)
+            latest = named_plans.latest(connection, name)
+            if latest is not None and latest.plan_digest == plan_digest:
+                return latest, False
+            version = 1 if latest is None else latest.version + 1
+            plan_id = named_plans.add(
+                connection, name=name, version=version, plan_digest=plan_digest, created_by=caller.name, now=now
+            )
+            made = None if plan_id is None else named_plans.find(connection, plan_id)
+        if made is not None:
+            return made, True
+    raise Overloaded(f"many callers post versions of {name} at this moment", retry_after=1)
 
 
 def read_named_plan(database: Database, plan_id: str) -> NamedPlan:

@@ -67,8 +67,9 @@ def poll(service: Service, cursor: str | None, **filters: Any) -> tuple[list[str
         seen += [one["job_id"] for one in page["items"]]
 
 
-def test_polling_sees_each_verdict_once_in_order(service: Service) -> None:
+def test_polling_sees_each_verdict_once_in_order(service_on_either: Service) -> None:
     """While verdicts are issued: nothing twice, nothing left out, and the order is that of issue."""
+    service = service_on_either
     assert poll(service, None) == ([], None)
     ids = [post(service, f"PT-{i}") for i in range(40)]
     seen, cursor = list[str](), None
@@ -82,7 +83,8 @@ def test_polling_sees_each_verdict_once_in_order(service: Service) -> None:
     assert poll(service, cursor) == ([], cursor)
 
 
-def test_newest_verdict_of_each_subject(service: Service) -> None:
+def test_newest_verdict_of_each_subject(service_on_either: Service) -> None:
+    service = service_on_either
     old, new, other = post(service, "A"), post(service, "A"), post(service, "B")
     service.work()
     assert set(poll(service, None, newest_only=True)[0]) == {new, other}
@@ -112,7 +114,9 @@ def test_pages_hold_everything_once(service: Service, path: str) -> None:
         assert seen == made[::-1]
 
 
-def test_a_version_of_a_plan_never_changes(service: Service) -> None:
+def test_a_version_of_a_plan_never_changes(service_on_either: Service) -> None:
+    service = service_on_either
+
     def store(**plan: Any) -> Any:
         return service.http.post("/v1/plans", json={"name": "pressure", "plan": plan})
 
@@ -133,7 +137,8 @@ def test_a_version_of_a_plan_never_changes(service: Service) -> None:
         assert service.http.request(method, first.headers["location"]).status_code == 405
 
 
-def test_versions_posted_at_once_are_numbered_without_gap_or_double(service: Service) -> None:
+def test_versions_posted_at_once_are_numbered_without_gap_or_double(service_on_either: Service) -> None:
+    service = service_on_either
     answers = list[Any]()
 
     def store(i: int) -> None:

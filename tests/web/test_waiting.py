@@ -39,7 +39,8 @@ async def at_once(address: str, calls: list[dict[str, Any]]) -> list[httpx.Respo
 
 
 @pytest.mark.long
-def test_a_thousand_posts_with_one_key_make_one_job(service: Service) -> None:
+def test_a_thousand_posts_with_one_key_make_one_job(service_on_either: Service) -> None:
+    service = service_on_either
     call = {"json": {"dataset": DATASET}, "headers": {"Idempotency-Key": "one"}}
     answers = asyncio.run(at_once(service.address, [call] * MANY))
     assert {answer.status_code for answer in answers} == {202}
