@@ -1,5 +1,6 @@
 """Commands that run the service: serve, worker, migrate, demo."""
 
+import signal
 import socket
 from contextlib import ExitStack
 from typing import Any
@@ -46,6 +47,7 @@ def serve(asked: dict[str, Any]) -> int:
         server_header=False,
         timeout_graceful_shutdown=ANSWER_SECONDS,
     )
+    signal.signal(signal.SIGTERM, _leave)
     with ExitStack() as stack:
         stack.enter_context(listener)
         if settings.workers:
@@ -56,6 +58,11 @@ def serve(asked: dict[str, Any]) -> int:
             print("There are no keys: it answers this machine only (`leastbend keys create` makes one)", flush=True)
         Server(config, app).run(sockets=[listener])
     return 0
+
+
+def _leave(_number: int, _frame: Any) -> None:
+    """After its own shutdown uvicorn sends the signal on: workers are stopped on the way out, not killed."""
+    raise SystemExit(0)
 
 
 def worker(asked: dict[str, Any]) -> int:

@@ -11,7 +11,6 @@ from service.store.named_plans import NamedPlan
 from service.store.records import Page
 from service.workflows.callers import Caller
 
-
 TRIES = 100  # each time another caller has taken the number
 
 

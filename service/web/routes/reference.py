@@ -23,6 +23,7 @@ PAGE = """<!doctype html>
 <meta charset="utf-8">
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <title>Leastbend: HTTP reference</title>
+<link rel="icon" href="data:,">
 <link rel="stylesheet" href="/docs/files/swagger-ui.css">
 </head>
 <body>
