@@ -1,17 +1,21 @@
 """JSON of what is kept: canonical form (RFC 8785), digests, and core's dataclasses to and fro."""
 
 import hashlib
+from typing import Any
 
+import rfc8785
 from pydantic import TypeAdapter
 
 from service.core.plan import Plan
 from service.core.result import Result
-from service.store.canonical import canonical
-
-__all__ = ["canonical", "digest", "plan_document", "read_plan", "read_result", "result_document"]
 
 PLAN = TypeAdapter(Plan)
 RESULT = TypeAdapter(Result)
+
+
+def canonical(value: Any) -> bytes:
+    """Canonical JSON (RFC 8785) of plain Python values. Raises ValueError for NaN and infinities."""
+    return rfc8785.dumps(value)
 
 
 def digest(document: bytes) -> str:
