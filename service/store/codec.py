@@ -1,6 +1,7 @@
 """JSON of what is kept: canonical form (RFC 8785), digests, and core's dataclasses to and fro."""
 
 import hashlib
+from functools import lru_cache
 from typing import Any
 
 import rfc8785
@@ -23,6 +24,7 @@ def digest(document: bytes) -> str:
     return hashlib.sha256(document).hexdigest()
 
 
+@lru_cache(maxsize=256)  # a laboratory uses a few plans over and over
 def plan_document(plan: Plan) -> bytes:
     """The whole plan, defaults included, in canonical form."""
     return canonical(PLAN.dump_python(plan, mode="json"))

@@ -9,7 +9,7 @@ from service.core.observations import Observations
 from service.core.plan import Plan
 from service.errors import InvalidInput, LeastbendError, NotFound, TooLarge
 from service.settings import Settings
-from service.store import batches, datasets, plans, repeats
+from service.store import batches, datasets, plans
 from service.store.batches import BatchItem, BatchRecord
 from service.store.clock import new_id
 from service.store.codec import canonical, digest, plan_document
@@ -17,8 +17,9 @@ from service.store.database import Database
 from service.store.records import DatasetContent, Page
 from service.store.transport import Transport
 from service.workflows.callers import Caller
+from service.workflows.repeat import made_before
 from service.workflows.run import describe
-from service.workflows.submit import add_job, below, demand_room, keep_dataset, observed_of, the_same
+from service.workflows.submit import add_job, below, demand_room, keep_dataset, observed_of
 
 Posted = DatasetContent | InvalidInput
 MESSAGES = 200  # sent at once; the sweep sends the rest as they are needed
@@ -50,20 +51,12 @@ def submit_batch(
     document = plan_document(plan)
     plan_digest, batch_id = digest(document), new_id()
     named = [digest(canonical(one)) if isinstance(one, dict) else one[2] for one in checked]
-    fingerprint = digest(canonical([*named, plan_digest, priority]))
     job_ids: list[str] = []
     with database.write() as connection:
-        if repeat_key is not None:
-            made = repeats.claim(
-                connection,
-                submitted_by=caller.name,
-                key=repeat_key,
-                fingerprint=fingerprint,
-                made_id=batch_id,
-                now=now,
-            )
-            if made is not None:
-                return the_same(made, fingerprint)
+        asked_for = [*named, plan_digest, priority]
+        before = made_before(connection, caller, repeat_key, asked_for, made_id=batch_id, now=now)
+        if before is not None:
+            return before
         demand_room(connection, settings, sum(not isinstance(one, dict) for one in checked))
         plans.store(connection, document, plan_digest, now)
         items: list[tuple[str | None, dict[str, Any] | None]] = []

@@ -16,15 +16,16 @@ from service.core.observations import Observations, observe
 from service.core.plan import Plan
 from service.errors import FieldError, InvalidInput, NotFound, Overloaded, TooLarge
 from service.settings import Settings
-from service.store import datasets, events, jobs, notifications, plans, repeats
+from service.store import datasets, events, jobs, notifications, plans
 from service.store.clock import new_id
-from service.store.codec import canonical, digest, plan_document
+from service.store.codec import digest, plan_document
 from service.store.database import Database
 from service.store.records import DatasetContent, DatasetRecord
 from service.store.transport import Transport
 from service.workflows.callers import Caller
 from service.workflows.notify import check_url
 from service.workflows.plans import plan_named
+from service.workflows.repeat import made_before
 
 RETRY_WHEN_FULL = 5
 
@@ -84,19 +85,11 @@ def submit_job(
     observed, dataset_digest = _checked(database, caller, asked, plan, settings)
     document = plan_document(plan)
     plan_digest = digest(document)
-    fingerprint = digest(canonical([dataset_digest, plan_digest, asked.subject, asked.priority, asked.notify_url]))
+    asked_for = [dataset_digest, plan_digest, asked.subject, asked.priority, asked.notify_url]
     with database.write() as connection:
-        if repeat_key is not None:
-            made = repeats.claim(
-                connection,
-                submitted_by=caller.name,
-                key=repeat_key,
-                fingerprint=fingerprint,
-                made_id=job_id,
-                now=now,
-            )
-            if made is not None:
-                return the_same(made, fingerprint)
+        before = made_before(connection, caller, repeat_key, asked_for, made_id=job_id, now=now)
+        if before is not None:
+            return before
         demand_room(connection, settings, 1)
         if asked.dataset is not None and observed is not None:
             dataset_id, _ = keep_dataset(connection, caller, asked.dataset, observed, dataset_digest, now)
@@ -183,14 +176,6 @@ def add_job(
     events.add(connection, job_id, "queued", now, submitted_by=caller.name)
     if notify_url is not None:
         notifications.add(connection, job_id, notify_url)
-
-
-def the_same(made: repeats.Made, fingerprint: str) -> str:
-    """What the first post with this key made. Raises InvalidInput if that post asked for something else."""
-    if made.fingerprint != fingerprint:
-        message = "was used within 24 hours for another body; take a new key for a new job"
-        raise InvalidInput.at("/header/idempotency-key", message, code="key_reused")
-    return made.id
 
 
 def _checked(
