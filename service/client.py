@@ -12,6 +12,8 @@ service is away or says to come back later.
 import time
 import uuid
 from collections.abc import Callable, Iterator, Mapping
+from datetime import UTC, datetime
+from email.utils import parsedate_to_datetime
 from types import TracebackType
 from typing import Any, Self
 
@@ -46,6 +48,7 @@ class Client:
         transport: httpx.BaseTransport | None = None,
     ) -> None:
         headers = {} if key is None else {"Authorization": f"Bearer {key}"}
+        self._timeout = timeout
         self._http = httpx.Client(base_url=base_url, headers=headers, timeout=timeout, transport=transport)
 
     def post_dataset(self, dataset: Mapping[str, Any]) -> Json:
@@ -64,7 +67,7 @@ class Client:
         """Queue a job on a dataset, given itself or by id, and answer it.
 
         `wait`: let the service answer only when the job has ended, or after so many seconds. `options`: subject,
-        priority. The job is made once however often the call had to be repeated.
+        priority, plan_id, notify_url. The job is made once however often the call had to be repeated.
         """
         body: Json = {
             **({"dataset_id": dataset} if isinstance(dataset, str) else {"dataset": dict(dataset)}),
@@ -75,7 +78,7 @@ class Client:
         headers = {"Idempotency-Key": idempotency_key or str(uuid.uuid4())}
         if wait is not None:
             headers["Prefer"] = f"wait={wait:.0f}"
-        return self._json("POST", "/v1/jobs", json=body, headers=headers)
+        return self._json("POST", "/v1/jobs", json=body, headers=headers, timeout=self._timeout + (wait or 0))
 
     def job(self, job_id: str) -> Json:
         """One job, with its result once it has ended."""
@@ -136,7 +139,7 @@ class Client:
             else:
                 if answer.status_code not in (429, 503) or not left:
                     return answer
-                pause = max(pause, float(answer.headers.get("Retry-After", "0") or 0))
+                pause = max(pause, _seconds(answer.headers.get("Retry-After", "")))
             time.sleep(min(pause, LONGEST_PAUSE))
             pause *= 2
         raise AssertionError("unreachable")
@@ -152,3 +155,13 @@ class Client:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.close()
+
+
+def _seconds(retry_after: str) -> float:
+    """The Retry-After header (RFC 9110 §10.2.3): seconds, or a date; 0 if it says neither."""
+    if retry_after.isdecimal():
+        return float(retry_after)
+    try:
+        return max(0.0, (parsedate_to_datetime(retry_after) - datetime.now(UTC)).total_seconds())
+    except (TypeError, ValueError):
+        return 0.0

@@ -54,6 +54,9 @@ def identify(database: Database, key: str | None) -> Caller:
             if keys.are_there(connection):
                 raise Unauthenticated("this call needs a key: Authorization: Bearer KEY")
             return LOCAL
+        # The index is searched with the SHA-256 of what was sent, never with the key: how long that takes depends on
+        # bits that a caller cannot steer towards those of a key, so it tells nothing of one. What is found is compared
+        # in constant time all the same, and a revoked key is told from an unknown one neither in words nor in work.
         record = keys.find(connection, keys.hash_of(key))
     if record is None or not hmac.compare_digest(record.hash, keys.hash_of(key)) or record.revoked_at is not None:
         raise Unauthenticated("this key is not known, or was revoked")

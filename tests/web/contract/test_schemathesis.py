@@ -16,6 +16,8 @@ HOOKS = "tests.web.contract.hooks"
 ROOT = HERE.parents[2]
 
 
+# One worker of schemathesis: in two threads CPython 3.11's ast.parse, which hypothesis uses, fails now and then
+# ("AST constructor recursion depth mismatch").
 def run(real: Real, key: str, *options: str, seconds: int) -> str:
     """schemathesis's own report. Fails with it if anything was found."""
     command = [sys.executable, "-m", "schemathesis.cli", "--config-file", str(HERE / "schemathesis.toml"), "run"]
@@ -50,10 +52,10 @@ def check(directory: Path, *options: str, least: int, seconds: int) -> None:
 @pytest.mark.long
 @pytest.mark.timeout(1200)
 def test_five_thousand_requests(tmp_path: Path) -> None:
-    check(tmp_path, "--max-examples", "220", "--seed", "20260504", "--workers", "2", least=5_000, seconds=1100)
+    check(tmp_path, "--max-examples", "220", "--seed", "20260504", least=5_000, seconds=1100)
 
 
 @pytest.mark.slow
 @pytest.mark.timeout(5400)
 def test_twenty_thousand_requests(tmp_path: Path) -> None:
-    check(tmp_path, "--max-examples", "700", "--workers", "2", least=20_000, seconds=5300)
+    check(tmp_path, "--max-examples", "700", least=20_000, seconds=5300)
