@@ -53,5 +53,9 @@ def figure_inputs(database: Database, caller: Caller, job_id: str) -> tuple[Data
         state = detail.job.state
         if state in (State.QUEUED, State.RUNNING):
             raise NotFound(f"job {job_id} is {state}: it has no figures yet", code="result_not_ready")
+        if state is State.SUCCEEDED:
+            raise NotFound(
+                f"the result of job {job_id} was removed by retention; its verdict is kept", code="no_result"
+            )
         raise NotFound(f"job {job_id} {state}: it has no figures", code="no_result")
     return loaded[0], detail

@@ -59,6 +59,7 @@ def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureNam
         figures = [
             FigureItem(name=name, title=TITLES[name], alt=said[name], reading=words.FIGURES[name]) for name in shown
         ]
+    if detail.job.state is State.SUCCEEDED:  # also where retention has removed the result: the verdict stays
         found = read_verdict(context.database, caller, job_id)
         verdict, digest = json.loads(found.document), found.digest
     document = json.loads(job_document(detail, notification))

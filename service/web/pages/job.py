@@ -35,7 +35,7 @@ async def job(request: Request, context: Ctx, visitor: VisitorDep, job_id: str) 
 async def report(request: Request, context: Ctx, visitor: VisitorDep, job_id: str) -> Response:
     """The same for paper."""
     page = await run_in_threadpool(gather, context, visitor.caller, job_id, IN_REPORT)
-    return show(request, visitor, "report.html" if page.verdict is not None else "job.html", page)
+    return show(request, visitor, "report.html" if page.job["result"] is not None else "job.html", page)
 
 
 @router.get("/job/{job_id}/report.pdf")

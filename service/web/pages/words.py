@@ -43,6 +43,7 @@ EVENTS = {
     "succeeded": "succeeded",
     "failed": "failed",
     "cancelled": "cancelled",
+    "purged": "removed by retention",
 }
 CHECKS = {
     "breusch_pagan": "Spread (Breusch-Pagan)",

@@ -9,6 +9,7 @@ from sqlalchemy import func, select, update
 from service.errors import InvalidInput, Overloaded
 from service.store import jobs as store
 from service.store.tables import jobs
+from service.workflows.retention import purge
 from tests.history import crowd
 from tests.web.examples import BOWED, DATASET, PLAN
 from tests.web.pages.reading import Refused
@@ -130,6 +131,25 @@ def test_ten_thousand_jobs_that_wait(service: Service):
     history = service.http.get("/history?state=queued").text
     assert history.count('<a id="job-') == 50
     assert len(history) < 60_000
+
+
+def test_a_result_that_retention_removed(service: Service):
+    job = put(service, DATASET, plan=PLAN)
+    service.work()
+    service.http.get(f"/v1/jobs/{job}/figures/curve.svg").raise_for_status()
+    later = datetime.now(UTC) + timedelta(days=1)
+    assert purge(service.database, before=later, now=later, dry_run=False).jobs == 1
+    page = service.http.get(f"/job/{job}")
+    assert page.status_code == 200
+    assert "The chosen degree can be defended" in page.text
+    assert "The result was removed" in page.text
+    assert "removed by retention" in page.text
+    assert service.http.get(f"/v1/jobs/{job}/verdict").headers["etag"][1:-1] in page.text
+    assert "The result was removed" in service.http.get(f"/job/{job}/report").text
+    for address in (f"/v1/jobs/{job}/report.pdf", f"/v1/jobs/{job}/figures/curve.svg"):
+        answer = service.http.get(address)
+        assert (answer.status_code, answer.json()["code"]) == (404, "no_result")
+    assert service.http.get("/subject", params={"name": DATASET["subject"]}).status_code == 200
 
 
 def test_a_failed_job_shows_its_error(service: Service, monkeypatch: pytest.MonkeyPatch):
