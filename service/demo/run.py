@@ -113,11 +113,13 @@ def _most_important(result: dict[str, Any]) -> str:
 
 def _print_next(address: str, job_id: str, *, kept: bool) -> None:
     if not kept:
-        print("\nTo try more, keep it running: leastbend demo --keep")
+        print("\nTo see the pages and try calls of your own, keep it running: leastbend demo --keep")
         return
     print(
         f"""
 Try next:
+  {address}/history  in a browser: the jobs, their figures and reports
+  {address}/docs  the HTTP reference
   curl {address}/v1/jobs?limit=3
   curl {address}/v1/jobs/{job_id}/verdict
   curl -H 'Prefer: wait=10' -H 'Content-Type: application/json' {address}/v1/jobs \\
