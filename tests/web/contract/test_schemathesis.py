@@ -58,4 +58,4 @@ def test_five_thousand_requests(tmp_path: Path) -> None:
 @pytest.mark.slow
 @pytest.mark.timeout(5400)
 def test_twenty_thousand_requests(tmp_path: Path) -> None:
-    check(tmp_path, "--max-examples", "700", least=20_000, seconds=5300)
+    check(tmp_path, "--max-examples", "1700", least=20_000, seconds=5300)
