@@ -21,6 +21,7 @@ from service.web.methods import HeadIsGet
 from service.web.metrics import Measured, Metrics
 from service.web.openapi import describe
 from service.web.pages import install as pages
+from service.web.paths import PlainText
 from service.web.rates import Rates
 from service.web.requests import RequestIds
 from service.web.routes import batches, datasets, events, figures, jobs, operations, plans, reference, report, verdicts
@@ -71,6 +72,7 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
     )
     problems.install(app)
     # The last added is the outermost.
+    app.add_middleware(PlainText)
     app.add_middleware(HeadIsGet)
     app.add_middleware(Measured, metrics=metrics)
     if settings.allowed_origins:

@@ -46,8 +46,8 @@ def get(path: bytes, *headers: bytes, host: bytes = b"127.0.0.1") -> bytes:
 
 
 PATHS = {
-    b"/v1/jobs/%00": 422,
-    b"/v1/jobs/a%00b/verdict": 422,
+    b"/v1/jobs/%00": 404,
+    b"/v1/jobs/a%00b/verdict": 404,
     b"/v1/jobs/%2e%2e": 422,
     b"/v1/jobs/..%2f..%2fetc%2fpasswd": 404,  # a slash is a slash, encoded or not: no such path
     b"/v1/jobs/../../etc/passwd": 404,

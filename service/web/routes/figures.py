@@ -11,6 +11,7 @@ from service.web.conditional import conditional
 from service.web.context import Context, Ctx
 from service.web.figures.names import MEDIA_TYPES, FigureFormat, FigureName
 from service.web.problems import documented
+from service.web.schemas.common import Identifier
 from service.workflows.callers import Caller
 
 router = APIRouter(prefix="/v1/jobs", tags=["figures"])
@@ -40,7 +41,7 @@ NAME = Path(description="Which figure: what each shows is in its `desc` and on t
     summary="Draw a figure as SVG",
 )
 async def get_svg(
-    request: Request, context: Ctx, caller: CallerDep, job_id: str, name: Annotated[FigureName, NAME]
+    request: Request, context: Ctx, caller: CallerDep, job_id: Identifier, name: Annotated[FigureName, NAME]
 ) -> Response:
     """Drawn once and kept. Text is drawn as outlines; `title` and `desc` say what the figure shows.
 
@@ -68,7 +69,7 @@ async def get_svg(
     summary="Draw a figure as PNG",
 )
 async def get_png(
-    request: Request, context: Ctx, caller: CallerDep, job_id: str, name: Annotated[FigureName, NAME]
+    request: Request, context: Ctx, caller: CallerDep, job_id: Identifier, name: Annotated[FigureName, NAME]
 ) -> Response:
     """Drawn once and kept; 840 pixels wide.
 

@@ -12,6 +12,7 @@ from service.web.context import Context, Ctx
 from service.web.figures.names import FigureName
 from service.web.pages.gather import gather
 from service.web.problems import documented
+from service.web.schemas.common import Identifier
 from service.workflows.callers import Caller
 
 router = APIRouter(prefix="/v1/jobs", tags=["figures"])
@@ -32,7 +33,7 @@ SHOWN: tuple[FigureName, ...] = ("curve", "degrees", "residuals", "unseen")
     operation_id="get_report",
     summary="Report of a job as PDF",
 )
-async def get_report(request: Request, context: Ctx, caller: CallerDep, job_id: str) -> Response:
+async def get_report(request: Request, context: Ctx, caller: CallerDep, job_id: Identifier) -> Response:
     """Verdict, figures, curve, requirements, candidates, warnings, digests and cautions on two pages.
 
     404 `result_not_ready` until the job has ended, `no_result` if it ended without one.
