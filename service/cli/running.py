@@ -14,7 +14,7 @@ from service.logs import log_as_json
 from service.settings import Settings
 from service.web.app import create_app
 from service.web.callers import is_loopback
-from service.web.server import Server
+from service.web.server import BoundedHead, Server
 from service.worker.main import work
 from service.worker.supervise import Companion
 from service.workflows.callers import list_keys
@@ -42,6 +42,7 @@ def serve(asked: dict[str, Any]) -> int:
     host, port = listener.getsockname()[:2]
     config = uvicorn.Config(
         app,
+        http=BoundedHead,
         log_config=None,
         access_log=False,
         server_header=False,

@@ -13,7 +13,7 @@ from service.settings import Settings
 from service.store.database import Database, open_database
 from service.web.app import create_app
 from service.web.context import Context
-from service.web.server import Server
+from service.web.server import BoundedHead, Server
 from service.worker.desk import Desk
 from service.worker.heartbeat import Heartbeat
 from service.workflows.provenance import this_machine
@@ -67,7 +67,14 @@ def running(settings: Settings) -> Iterator[Service]:
     """The service listens on a free port until the block ends."""
     app = create_app(settings)
     config = uvicorn.Config(
-        app, host="127.0.0.1", port=0, log_level="warning", access_log=False, backlog=2048, timeout_graceful_shutdown=5
+        app,
+        host="127.0.0.1",
+        port=0,
+        log_level="warning",
+        access_log=False,
+        backlog=2048,
+        timeout_graceful_shutdown=5,
+        http=BoundedHead,
     )
     server = Server(config, app)
     thread = threading.Thread(target=server.run)
