@@ -179,7 +179,7 @@ def test_demo_ends_with_verdicts(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("options", "said"),
     [
-        (("--host", "0.0.0.0", "--port", "0"), "not a loopback address"),
+        (("--host", "0.0.0.0", "--port", "0"), "there are no keys"),
         (("--port", "70000"), "LEASTBEND_PORT"),
         (("--workers", "-1"), "LEASTBEND_WORKERS"),
     ],

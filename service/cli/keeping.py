@@ -1,19 +1,26 @@
-"""Keeping an installation: backup, moving to PostgreSQL, removing what is old, checking every digest."""
+"""Keeping an installation: migrating, backup, moving to PostgreSQL, removing what is old, checking every digest."""
 
 from datetime import timedelta
 from typing import Any
 
-from service.cli.common import opened, settings_of
+from service.cli.common import migrate_now, opened, settings_of
 from service.errors import InvalidInput
 from service.store.clock import rfc3339, utc_now
 from service.store.integrity import Checked
+from service.workflows import retention
 from service.workflows.backup import back_up
 from service.workflows.move import move_installation
-from service.workflows.retention import purge
 from service.workflows.verify import verify_digests
 
 
-def backup_command(asked: dict[str, Any]) -> int:
+def migrate(asked: dict[str, Any]) -> int:
+    """Bring the database to this version's revision."""
+    before, after = migrate_now(settings_of(asked))
+    print(f"The database is at revision {after}" + ("." if before == after else f" (was: {before or 'empty'})."))
+    return 0
+
+
+def backup(asked: dict[str, Any]) -> int:
     """Copy the SQLite database to a new file while the service runs."""
     destination = asked.pop("to")
     done = back_up(settings_of(asked), destination)
@@ -21,7 +28,7 @@ def backup_command(asked: dict[str, Any]) -> int:
     return 0
 
 
-def move_command(asked: dict[str, Any]) -> int:
+def move(asked: dict[str, Any]) -> int:
     """Carry an embedded installation to an empty PostgreSQL database, all or nothing, and check every digest."""
     url = asked.pop("to")
     settings_of(asked | {"database_url": url})  # says what is wrong with the address
@@ -33,7 +40,7 @@ def move_command(asked: dict[str, Any]) -> int:
     return 0
 
 
-def purge_command(asked: dict[str, Any]) -> int:
+def purge(asked: dict[str, Any]) -> int:
     """Remove points, results and events of what ended long ago; verdicts are kept. Without --remove: only count."""
     days, remove = asked.pop("older_than"), asked.pop("remove")
     if days < 1:
@@ -41,7 +48,7 @@ def purge_command(asked: dict[str, Any]) -> int:
     now = utc_now()
     before = now - timedelta(days=days)
     with opened(settings_of(asked)) as database:
-        done = purge(database, before=before, now=now, dry_run=not remove)
+        done = retention.purge(database, before=before, now=now, dry_run=not remove)
     would = "would lose" if done.dry_run else "lost"
     print(
         f"Ended before {rfc3339(before)}: {done.jobs} jobs {would} results and events, {done.datasets} datasets their"
@@ -50,7 +57,7 @@ def purge_command(asked: dict[str, Any]) -> int:
     return 0
 
 
-def check_command(asked: dict[str, Any]) -> int:
+def check(asked: dict[str, Any]) -> int:
     """Compute every digest again, and follow the chain of verdicts from the first to the last."""
     with opened(settings_of(asked)) as database:
         checked = verify_digests(database)

@@ -8,7 +8,7 @@ from service.store.clock import rfc3339, utc_now
 from service.workflows.callers import create_key, list_keys, revoke_key
 
 
-def create_key_command(asked: dict[str, Any]) -> int:
+def create(asked: dict[str, Any]) -> int:
     """Make a key and show it, this once."""
     name, role = asked.pop("name"), asked.pop("role")
     if not 0 < len(name) <= 200 or not name.isprintable():
@@ -19,7 +19,7 @@ def create_key_command(asked: dict[str, Any]) -> int:
     return 0
 
 
-def list_keys_command(asked: dict[str, Any]) -> int:
+def show(asked: dict[str, Any]) -> int:
     """List keys: name, role, when made, when revoked."""
     with opened(settings_of(asked)) as database:
         for one in list_keys(database):
@@ -28,7 +28,7 @@ def list_keys_command(asked: dict[str, Any]) -> int:
     return 0
 
 
-def revoke_key_command(asked: dict[str, Any]) -> int:
+def revoke(asked: dict[str, Any]) -> int:
     """Revoke a key: nobody gets in with it from now on. What it submitted stays."""
     name = asked.pop("name")
     with opened(settings_of(asked)) as database:

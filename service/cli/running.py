@@ -73,13 +73,6 @@ def worker(asked: dict[str, Any]) -> int:
     return work(settings)
 
 
-def migrate_command(asked: dict[str, Any]) -> int:
-    """Bring the database to this version's revision."""
-    before, after = migrate_now(settings_of(asked))
-    print(f"The database is at revision {after}" + ("." if before == after else f" (was: {before or 'empty'})."))
-    return 0
-
-
 def demo(asked: dict[str, Any]) -> int:
     """Start the real service, post the demo datasets over HTTP and show what comes back."""
     return run_demo(data_dir=asked.get("data_dir"), keep=asked["keep"], said_when_up=SAID_WHEN_UP)
