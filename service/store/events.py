@@ -1,6 +1,7 @@
 """What happened to a job, in order; never changed afterwards."""
 
 import json
+from collections.abc import Sequence
 from datetime import datetime
 from typing import Any
 
@@ -15,6 +16,13 @@ ADD = insert(job_events)
 def add(connection: Connection, job_id: str, kind: str, now: datetime, **detail: Any) -> None:
     """One event: `queued`, `started`, `requeued`, `succeeded`, `failed` or `cancelled`, with what is known of it."""
     connection.execute(ADD, {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
+
+
+def add_queued(connection: Connection, job_ids: Sequence[str], now: datetime, *, submitted_by: str) -> None:
+    """The first event of many jobs at once."""
+    detail = json.dumps({"submitted_by": submitted_by})
+    rows = [{"job_id": job_id, "at": now, "kind": "queued", "detail": detail} for job_id in job_ids]
+    connection.execute(ADD, rows)
 
 
 def of_job(connection: Connection, job_id: str) -> list[tuple[str, datetime, dict[str, Any]]]:

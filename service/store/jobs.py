@@ -1,5 +1,6 @@
 """Jobs as callers see them: putting one in, reading one or many."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass, fields
 from datetime import datetime
 from typing import Any
@@ -37,33 +38,38 @@ def waiting(connection: Connection, *, at_most: int) -> int:
     return connection.execute(COUNT_WAITING, {"at_most": at_most}).scalar_one()
 
 
-def add(
-    connection: Connection,
-    *,
-    job_id: str,
-    dataset_id: str,
-    plan_digest: str,
-    subject: str,
-    submitted_by: str,
-    priority: int,
-    now: datetime,
-) -> None:
-    """A new job, waiting; the caller hands its id to the queue after the commit."""
-    row = {
-        "id": job_id,
-        "state": State.QUEUED,
-        "dataset_id": dataset_id,
-        "plan_digest": plan_digest,
-        "subject": subject,
-        "submitted_by": submitted_by,
-        "priority": priority,
-        "queued_at": now,
-        "run_after": EPOCH,  # at once, whatever the clock of the host that runs it says
-        "attempts": 0,
-        "by": submitted_by,
-        "at": priority,
-    }
-    connection.execute(ADD, row)
+@dataclass(frozen=True, kw_only=True, slots=True)
+class NewJob:
+    """A job to be put in."""
+
+    job_id: str
+    dataset_id: str
+    plan_digest: str
+    subject: str
+    submitted_by: str
+    priority: int
+
+
+def add(connection: Connection, new: Sequence[NewJob], now: datetime) -> None:
+    """New jobs, waiting, each at its turn behind the one before; the caller tells the queue after the commit."""
+    rows = [
+        {
+            "id": one.job_id,
+            "state": State.QUEUED,
+            "dataset_id": one.dataset_id,
+            "plan_digest": one.plan_digest,
+            "subject": one.subject,
+            "submitted_by": one.submitted_by,
+            "priority": one.priority,
+            "queued_at": now,
+            "run_after": EPOCH,  # at once, whatever the clock of the host that runs it says
+            "attempts": 0,
+            "by": one.submitted_by,
+            "at": one.priority,
+        }
+        for one in new
+    ]
+    connection.execute(ADD, rows)
 
 
 def find(connection: Connection, job_id: str) -> JobRecord | None:

@@ -1,4 +1,4 @@
-"""Many datasets at once under one plan: each is taken or refused by itself, all in one transaction."""
+"""Many datasets at once under one plan: each is taken or refused by itself; the jobs are put in all or none."""
 
 from collections.abc import Iterator, Sequence
 from datetime import datetime
@@ -14,14 +14,17 @@ from service.store.batches import BatchItem, BatchRecord
 from service.store.clock import new_id
 from service.store.codec import canonical, digest, plan_document
 from service.store.database import Database
+from service.store.jobs import NewJob
 from service.store.records import DatasetContent, Page
 from service.store.transport import Transport
 from service.workflows.callers import Caller
 from service.workflows.repeat import made_before
 from service.workflows.run import describe
-from service.workflows.submit import add_job, below, demand_room, keep_dataset, observed_of
+from service.workflows.submit import add_jobs, below, demand_room, keep_dataset, observed_of
 
 Posted = DatasetContent | InvalidInput
+Good = tuple[DatasetContent, Observations, str]  # with its digest
+STEP = 100  # datasets stored in one transaction
 MESSAGES = 200  # sent at once; the sweep sends the rest as they are needed
 ROWS = 200  # of the results, in one reading transaction
 
@@ -48,46 +51,56 @@ def submit_batch(
     if len(posted) > settings.batch_size:
         raise TooLarge(f"the batch has {len(posted)} datasets; at most {settings.batch_size} are taken")
     checked = [_checked(one, plan, settings) for one in posted]
+    good = [one for one in checked if not isinstance(one, dict)]
+    with database.read() as connection:
+        demand_room(connection, settings, len(good))  # before the datasets are stored, and again with the jobs
+    dataset_ids = _keep_datasets(database, caller, good, now)
     document = plan_document(plan)
     plan_digest, batch_id = digest(document), new_id()
+    new = [
+        NewJob(
+            job_id=new_id(),
+            dataset_id=dataset_id,
+            plan_digest=plan_digest,
+            subject=content.subject,
+            submitted_by=caller.name,
+            priority=priority,
+        )
+        for dataset_id, (content, _, _) in zip(dataset_ids, good, strict=True)
+    ]
+    taken = iter(new)
+    items = [(None, one) if isinstance(one, dict) else (next(taken).job_id, None) for one in checked]
     named = [digest(canonical(one)) if isinstance(one, dict) else one[2] for one in checked]
-    job_ids: list[str] = []
     with database.write() as connection:
         asked_for = [*named, plan_digest, priority]
         before = made_before(connection, caller, repeat_key, asked_for, made_id=batch_id, now=now)
         if before is not None:
             return before
-        demand_room(connection, settings, sum(not isinstance(one, dict) for one in checked))
+        demand_room(connection, settings, len(new))
         plans.store(connection, document, plan_digest, now)
-        items: list[tuple[str | None, dict[str, Any] | None]] = []
-        for one in checked:
-            if isinstance(one, dict):
-                items.append((None, one))
-                continue
-            content, observed, dataset_digest = one
-            dataset_id, _ = keep_dataset(connection, caller, content, observed, dataset_digest, now)
-            job_ids.append(new_id())
-            items.append((job_ids[-1], None))
-            add_job(
-                connection,
-                caller,
-                job_id=job_ids[-1],
-                dataset_id=dataset_id,
-                plan_digest=plan_digest,
-                subject=content.subject,
-                priority=priority,
-                notify_url=None,
-                now=now,
-            )
+        if new:
+            add_jobs(connection, caller, new, now)
         batches.add(
             connection, batch_id=batch_id, submitted_by=caller.name, plan_digest=plan_digest, now=now, items=items
         )
-    for job_id in job_ids[:MESSAGES]:
-        transport.send(job_id, priority)
+    for one in new[:MESSAGES]:
+        transport.send(one.job_id, priority)
     return batch_id
 
 
-def _checked(one: Posted, plan: Plan, settings: Settings) -> tuple[DatasetContent, Observations, str] | dict[str, Any]:
+def _keep_datasets(database: Database, caller: Caller, good: Sequence[Good], now: datetime) -> list[str]:
+    """Ids of the stored datasets. In steps, so that others can write in between: a dataset alone means nothing yet, and
+    the same batch posted again finds those that are there.
+    """
+    ids: list[str] = []
+    for start in range(0, len(good), STEP):
+        with database.write() as connection:
+            for content, observed, dataset_digest in good[start : start + STEP]:
+                ids.append(keep_dataset(connection, caller, content, observed, dataset_digest, now)[0])
+    return ids
+
+
+def _checked(one: Posted, plan: Plan, settings: Settings) -> Good | dict[str, Any]:
     if isinstance(one, InvalidInput):
         return describe(one)
     try:

@@ -4,7 +4,7 @@ Each function is one writing transaction. A job's id goes to the queue after the
 sends it.
 """
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import datetime
@@ -20,6 +20,7 @@ from service.store import datasets, events, jobs, notifications, plans
 from service.store.clock import new_id
 from service.store.codec import digest, plan_document
 from service.store.database import Database
+from service.store.jobs import NewJob
 from service.store.records import DatasetContent, DatasetRecord
 from service.store.transport import Transport
 from service.workflows.callers import Caller
@@ -97,17 +98,17 @@ def submit_job(
         else:
             dataset_id, subject = _stored(connection, caller, asked.dataset_id or "")
         plans.store(connection, document, plan_digest, now)
-        add_job(
-            connection,
-            caller,
+        new = NewJob(
             job_id=job_id,
             dataset_id=dataset_id,
             plan_digest=plan_digest,
             subject=asked.subject or subject,
+            submitted_by=caller.name,
             priority=asked.priority,
-            notify_url=asked.notify_url,
-            now=now,
         )
+        add_jobs(connection, caller, [new], now)
+        if asked.notify_url is not None:
+            notifications.add(connection, job_id, asked.notify_url)
     transport.send(job_id, asked.priority)
     return job_id
 
@@ -150,32 +151,10 @@ def keep_dataset(
     return dataset_id, new
 
 
-def add_job(
-    connection: Connection,
-    caller: Caller,
-    *,
-    job_id: str,
-    dataset_id: str,
-    plan_digest: str,
-    subject: str,
-    priority: int,
-    notify_url: str | None,
-    now: datetime,
-) -> None:
-    """A waiting job, its first event, and whom to tell of its end."""
-    jobs.add(
-        connection,
-        job_id=job_id,
-        dataset_id=dataset_id,
-        plan_digest=plan_digest,
-        subject=subject,
-        submitted_by=caller.name,
-        priority=priority,
-        now=now,
-    )
-    events.add(connection, job_id, "queued", now, submitted_by=caller.name)
-    if notify_url is not None:
-        notifications.add(connection, job_id, notify_url)
+def add_jobs(connection: Connection, caller: Caller, new: Sequence[NewJob], now: datetime) -> None:
+    """Waiting jobs, each with its first event."""
+    jobs.add(connection, new, now)
+    events.add_queued(connection, [one.job_id for one in new], now, submitted_by=caller.name)
 
 
 def _checked(
