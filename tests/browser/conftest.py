@@ -26,9 +26,12 @@ FLAGS = [
 DESKTOP, PHONE = {"width": 1200, "height": 800}, {"width": 320, "height": 640}
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="package")
 def browser() -> Iterator[Browser]:
-    """One browser for all tests; each page has a context of its own."""
+    """One browser for all tests here; each page has a context of its own.
+
+    Not for the session: while it is open, an event loop runs in this thread, and other tests start their own.
+    """
     path = os.environ.get("LEASTBEND_TEST_BROWSER") or shutil.which("chromium") or shutil.which("chromium-browser")
     if path is None:
         if os.environ.get("LEASTBEND_REQUIRE_BROWSER") == "1":
