@@ -31,7 +31,6 @@ from tests.web.real import make_key_and_secret, real_service
 from tests.web.receiver import receiving, simple
 
 SECRET = "whsec_" + "MfKQ9r8GKYqrTwjUPD8ILPZIo2LaLaSw"
-START = datetime.now(UTC)  # the library demands fresh timestamps
 
 
 class Notified:
@@ -39,7 +38,8 @@ class Notified:
 
     def __init__(self, desk: Desk, url: str) -> None:
         self.desk = desk
-        self.key, self.secret = create_key(desk.database, name="anna", role="submit", now=START)
+        self.start = datetime.now(UTC)  # the library demands fresh timestamps
+        self.key, self.secret = create_key(desk.database, name="anna", role="submit", now=self.start)
         self.settings = desk.settings.model_copy(update={"notify_private": True})
         asked = Submission(dataset=calibration(1), notify_url=url)
         desk = Desk(desk.database, desk.transport, self.settings)
@@ -47,10 +47,10 @@ class Notified:
         self.poster: Any = Poster(allow_private=True, seconds=2)
 
     def end(self) -> None:
-        cancel_job(self.desk.database, self.job_id, by="anna", now=START)
+        cancel_job(self.desk.database, self.job_id, by="anna", now=self.start)
 
     def send(self, seconds: float = 0) -> int:
-        moment = START + timedelta(seconds=seconds)
+        moment = self.start + timedelta(seconds=seconds)
         return send_due(self.desk.database, self.settings, self.poster, clock=lambda: moment)
 
     @property
@@ -98,7 +98,7 @@ def test_it_is_sent_again_with_longer_pauses_until_it_is_received(desk: Desk) ->
             assert told.send(at) == 1
             assert (told.state.state, told.state.attempts) == ("waiting", number + 1)
             assert told.state.last_answer == f"answered {answers[number]}"
-            assert told.state.next_at == START + timedelta(seconds=at) + pause
+            assert told.state.next_at == told.start + timedelta(seconds=at) + pause
             at += pause.total_seconds()
             assert told.send(at - 0.001) == 0
         assert told.send(at) == 1
@@ -202,7 +202,7 @@ def test_two_senders_send_once(desk: Desk) -> None:
                 return Poster(allow_private=True)(url, body, headers)
 
         def later() -> datetime:
-            return START + TAKEN_FOR - timedelta(seconds=1)
+            return told.start + TAKEN_FOR - timedelta(seconds=1)
 
         told.poster = Slow()
         assert told.send() == 1
@@ -228,7 +228,7 @@ def test_a_sender_killed_in_the_middle_sends_again(desk: Desk) -> None:
     with receiving(lambda _handler, _number: time.sleep(30)) as receiver:
         told = Notified(desk, receiver.url)
         told.end()
-        command = [sys.executable, "-c", KILLED, START.isoformat()]
+        command = [sys.executable, "-c", KILLED, told.start.isoformat()]
         with subprocess.Popen(command, env={**told.settings.environment(), "PYTHONPATH": "."}) as process:
             assert receiver.arrived.wait(60)
             process.send_signal(signal.SIGKILL)
