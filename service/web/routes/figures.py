@@ -10,7 +10,7 @@ from service.web.callers import CallerDep
 from service.web.conditional import conditional
 from service.web.context import Context, Ctx
 from service.web.figures.names import MEDIA_TYPES, FigureFormat, FigureName
-from service.web.problems import documented
+from service.web.problems import Responses, documented
 from service.web.schemas.common import Identifier
 from service.workflows.callers import Caller
 
@@ -22,21 +22,17 @@ DRAWN_ONLY = "default-src 'none'; style-src 'unsafe-inline'; sandbox"
 NAME = Path(description="Which figure: what each shows is in its `desc` and on the job's page.")
 
 
+def _drawn(media_type: str) -> Responses:
+    """`responses` of a call that answers with a picture."""
+    picture = {"description": "The figure", "content": {media_type: {"schema": {"type": "string"}}}}
+    unchanged = {"description": "Not changed since the ETag given in If-None-Match"}
+    return documented(401, 403, 404, 422, 429, 503, also={200: picture, 304: unchanged})
+
+
 @router.get(
     "/{job_id}/figures/{name}.svg",
     response_class=Response,
-    responses=documented(
-        401,
-        403,
-        404,
-        422,
-        429,
-        503,
-        also={
-            200: {"description": "The figure", "content": {"image/svg+xml": {"schema": {"type": "string"}}}},
-            304: {"description": "Not changed since the ETag given in If-None-Match"},
-        },
-    ),
+    responses=_drawn("image/svg+xml"),
     operation_id="get_figure_svg",
     summary="Draw a figure as SVG",
 )
@@ -53,18 +49,7 @@ async def get_svg(
 @router.get(
     "/{job_id}/figures/{name}.png",
     response_class=Response,
-    responses=documented(
-        401,
-        403,
-        404,
-        422,
-        429,
-        503,
-        also={
-            200: {"description": "The figure", "content": {"image/png": {"schema": {"type": "string"}}}},
-            304: {"description": "Not changed since the ETag given in If-None-Match"},
-        },
-    ),
+    responses=_drawn("image/png"),
     operation_id="get_figure_png",
     summary="Draw a figure as PNG",
 )
