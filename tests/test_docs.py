@@ -60,7 +60,12 @@ def test_files_that_the_documents_name_exist() -> None:
 
 
 def test_the_first_command_of_the_readme_installs_what_the_lock_pins() -> None:
-    assert "pip install --no-compile -r requirements.lock" in README
-    lock = (ROOT / "requirements.lock").read_text("utf-8")
-    assert "://" not in lock
-    assert lock.count("--hash=sha256:") > lock.count("==") > 50
+    assert "pip install --no-compile -r requirements-run.lock" in README
+    assert "pip install -r requirements.lock && .venv/bin/pytest" in README
+    pins = {}
+    for name in ("requirements-run.lock", "requirements.lock"):
+        lock = (ROOT / name).read_text("utf-8")
+        assert "://" not in lock
+        assert lock.count("--hash=sha256:") > lock.count("==") > 50
+        pins[name] = set(re.findall(r"^[\w.-]+==\S+", lock, re.MULTILINE))
+    assert pins["requirements-run.lock"] < pins["requirements.lock"]
