@@ -29,10 +29,11 @@ class WriteLock:
         self._seconds = seconds
 
     @contextmanager
-    def held(self) -> Iterator[None]:
+    def held(self, *, seconds: float | None = None) -> Iterator[None]:
         """Wait for it, for so many seconds at most. Raises Busy."""
-        deadline = time.monotonic() + self._seconds
-        if not self._within.acquire(timeout=self._seconds):
+        seconds = self._seconds if seconds is None else seconds
+        deadline = time.monotonic() + seconds
+        if not self._within.acquire(timeout=seconds):
             raise Busy
         try:
             while True:

@@ -12,6 +12,8 @@ from typing import Self
 
 from service.core.plan import Plan, Resampling
 from service.settings import Settings
+from service.store.database import Database
+from service.store.write_lock import Busy
 from service.worker.supervise import ONE_THREAD
 
 PROC = Path("/proc")
@@ -86,6 +88,27 @@ def consumer_of(keeper: int) -> list[int]:
 def hands_of(keeper: int) -> list[int]:
     """Worker and sweeper processes below this keeper that live."""
     return [pid for consumer in consumer_of(keeper) for pid in children_of(consumer) if alive(pid)]
+
+
+def freeze(pids: list[int], database: Database) -> None:
+    """SIGSTOP of all of them, but not in the middle of a write: SQLite's lock would then stop everybody else too."""
+    while True:
+        send(signal.SIGSTOP, pids)
+        if database.lock is None:
+            return
+        try:
+            with database.lock.held(seconds=0.2):
+                return
+        except Busy:
+            send(signal.SIGCONT, pids)
+            time.sleep(0.01)
+
+
+def send(how: signal.Signals, pids: list[int]) -> None:
+    """To those of them that live."""
+    for pid in pids:
+        if alive(pid):
+            os.kill(pid, how)
 
 
 def alive(pid: int) -> bool:

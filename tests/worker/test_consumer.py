@@ -15,7 +15,7 @@ from service.store.transport import Transport
 from service.worker.supervise import Companion
 from service.workflows.cancel import cancel_job
 from tests.jobs import Desk
-from tests.worker.processes import FIFTY_MILLISECONDS, SECONDS, Workers, alive, until
+from tests.worker.processes import FIFTY_MILLISECONDS, SECONDS, Workers, alive, freeze, send, until
 
 pytestmark = pytest.mark.long
 LONG_JOB: dict[str, Any] = {"plan": SECONDS, "points": 2500}
@@ -114,8 +114,7 @@ def test_a_worker_stopped_beyond_its_lease_records_nothing_twice(brisk: Desk) ->
     with Workers(brisk.settings) as first:
         until(lambda: running(brisk, job_id))
         frozen = [*first.children(), *first.consumer(), first.pid]
-        for pid in frozen:
-            os.kill(pid, signal.SIGSTOP)
+        freeze(frozen, brisk.database)
         try:
             # another host's sweep, which can know nothing but that the lease is over
             claim = None
@@ -123,14 +122,10 @@ def test_a_worker_stopped_beyond_its_lease_records_nothing_twice(brisk: Desk) ->
                 until(lambda: "requeued" in brisk.history(job_id), seconds=30)
                 until(lambda: running(brisk, job_id))
                 claim = brisk.job(job_id)
-                for pid in frozen:
-                    if alive(pid):
-                        os.kill(pid, signal.SIGCONT)
+                send(signal.SIGCONT, frozen)
                 until(lambda: ended(brisk, job_id))
         finally:
-            for pid in frozen:
-                if alive(pid):
-                    os.kill(pid, signal.SIGCONT)
+            send(signal.SIGCONT, frozen)
     assert claim is not None
     assert brisk.job(job_id).state == State.SUCCEEDED
     assert brisk.recorded() == (1, 1)
