@@ -57,7 +57,8 @@ class Desk:
         """Id of a new job."""
         caller = Caller(name=by, role="submit")
         now = self.start + timedelta(seconds=seconds)
-        return submit_job(self.database, self.transport, self.settings, caller, asked, repeat_key=None, now=now)
+        put, _ = submit_job(self.database, self.transport, self.settings, caller, asked, repeat_key=None, now=now)
+        return put.job.id
 
     def take(self, worker: str = "w1", *, seconds: float = 0, stalest: bool = False) -> Claim | None:
         """Claim the next job."""

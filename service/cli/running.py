@@ -1,5 +1,6 @@
 """Commands that run the service: serve, worker, migrate, demo."""
 
+import gc
 import signal
 import socket
 from contextlib import ExitStack
@@ -57,6 +58,8 @@ def serve(asked: dict[str, Any]) -> int:
         print(f"{SAID_WHEN_UP}http://{shown}:{port} with {settings.workers} worker processes", flush=True)
         if not guarded:
             print("There are no keys: it answers this machine only (`leastbend keys create` makes one)", flush=True)
+        gc.collect()
+        gc.freeze()  # what stays for good is not looked through again and again
         Server(config, app).run(sockets=[listener])
     return 0
 

@@ -25,7 +25,7 @@ def from_microseconds(value: int) -> datetime:
 
 def rfc3339(moment: datetime) -> str:
     """RFC 3339 in UTC, always with six decimals, so that text sorts as time does."""
-    return moment.astimezone(UTC).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+    return moment.astimezone(UTC).replace(tzinfo=None).isoformat(timespec="microseconds") + "Z"
 
 
 def new_id() -> str:

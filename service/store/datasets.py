@@ -64,15 +64,8 @@ def store(
     connection: Connection, content: DatasetContent, digest: str, summary: dict[str, Any], now: Any
 ) -> tuple[str, bool]:
     """Id of the dataset with this digest, and whether it is new."""
-    found = connection.execute(FIND_DIGEST, {"of_digest": digest}).first()
-    if found is not None and found.size > 0:
-        return found.id, False
     numbers = {name: column.astype(LITTLE_ENDIAN).tobytes() for name, column in columns(content).items()}
     series = None if content.series is None else json.dumps(content.series)
-    if found is not None:  # retention took its points: here they are again
-        again = {"series": series, "created_at": now, **numbers}
-        connection.execute(update(datasets).where(datasets.c.id == found.id).values(**again))
-        return found.id, False
     row = {
         "id": new_id(),
         "digest": digest,
@@ -90,7 +83,11 @@ def store(
     new = connection.execute(ADD, row).scalar()
     if new is not None:
         return cast(str, new), True
-    return connection.execute(select(datasets.c.id).where(datasets.c.digest == digest)).scalar_one(), False
+    found = connection.execute(FIND_DIGEST, {"of_digest": digest}).one()
+    if found.size == 0:  # retention took its points: here they are again
+        again = {"series": series, "created_at": now, **numbers}
+        connection.execute(update(datasets).where(datasets.c.id == found.id).values(**again))
+    return found.id, False
 
 
 def posted(connection: Connection, dataset_id: str, submitted_by: str) -> None:

@@ -28,6 +28,13 @@ RECORD = tuple(jobs.c[one.name] for one in fields(JobRecord))
 
 # Built once: building these takes longer than running them.
 ADD = insert(jobs).values(turn=next_turn(bindparam("by", type_=Text()), bindparam("at", type_=Integer())))
+FIND = select(*RECORD).where(jobs.c.id == bindparam("of_id"))
+DETAIL = (
+    select(*RECORD, plans.c.document.label("plan"), results.c.document.label("result"), results.c.provenance)
+    .join(plans, plans.c.digest == jobs.c.plan_digest)
+    .outerjoin(results, results.c.job_id == jobs.c.id)
+    .where(jobs.c.id == bindparam("of_id"))
+)
 COUNT_WAITING = select(func.count()).select_from(
     select(literal(1)).where(WAITING).limit(bindparam("at_most", type_=Integer())).subquery()
 )
@@ -72,21 +79,39 @@ def add(connection: Connection, new: Sequence[NewJob], now: datetime) -> None:
     connection.execute(ADD, rows)
 
 
+def waiting_record(new: NewJob, now: datetime) -> JobRecord:
+    """The row of a job that was just put in, without asking for it."""
+    return JobRecord(
+        id=new.job_id,
+        state=State.QUEUED,
+        dataset_id=new.dataset_id,
+        plan_digest=new.plan_digest,
+        subject=new.subject,
+        submitted_by=new.submitted_by,
+        priority=new.priority,
+        queued_at=now,
+        attempts=0,
+        worker=None,
+        started_at=None,
+        finished_at=None,
+        stage=None,
+        stage_done=None,
+        stage_of=None,
+        error=None,
+        verdict=None,
+        chosen_degree=None,
+    )
+
+
 def find(connection: Connection, job_id: str) -> JobRecord | None:
     """The row of one job."""
-    row = connection.execute(select(*RECORD).where(jobs.c.id == job_id)).mappings().first()
+    row = connection.execute(FIND, {"of_id": job_id}).mappings().first()
     return None if row is None else _record(row)
 
 
 def detail(connection: Connection, job_id: str) -> JobDetail | None:
     """One job with its plan and, once it succeeded, its result and provenance."""
-    query = (
-        select(*RECORD, plans.c.document.label("plan"), results.c.document.label("result"), results.c.provenance)
-        .join(plans, plans.c.digest == jobs.c.plan_digest)
-        .outerjoin(results, results.c.job_id == jobs.c.id)
-        .where(jobs.c.id == job_id)
-    )
-    row = connection.execute(query).mappings().first()
+    row = connection.execute(DETAIL, {"of_id": job_id}).mappings().first()
     if row is None:
         return None
     return JobDetail(job=_record(row), plan=row["plan"], result=row["result"], provenance=row["provenance"])

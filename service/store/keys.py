@@ -4,7 +4,7 @@ import hashlib
 from dataclasses import dataclass, fields
 from datetime import datetime
 
-from sqlalchemy import Connection, exists, insert, select, update
+from sqlalchemy import Connection, bindparam, exists, insert, select, update
 
 from service.store.tables import keys
 
@@ -23,6 +23,8 @@ class KeyRecord:
 
 
 COLUMNS = tuple(keys.c[one.name] for one in fields(KeyRecord))
+FIND = select(*COLUMNS).where(keys.c.hash == bindparam("of_hash"))
+ANY = select(exists(select(keys.c.id)))
 
 
 def hash_of(key: str) -> str:
@@ -37,7 +39,7 @@ def add(connection: Connection, record: KeyRecord) -> None:
 
 def find(connection: Connection, hash_: str) -> KeyRecord | None:
     """The key with this hash, revoked or not."""
-    row = connection.execute(select(*COLUMNS).where(keys.c.hash == hash_)).mappings().first()
+    row = connection.execute(FIND, {"of_hash": hash_}).mappings().first()
     return None if row is None else KeyRecord(**row)
 
 
@@ -54,7 +56,7 @@ def every(connection: Connection) -> list[KeyRecord]:
 
 def are_there(connection: Connection) -> bool:
     """Whether any key was ever made, revoked ones included: then nobody gets in without one."""
-    return bool(connection.execute(select(exists(select(keys.c.id)))).scalar_one())
+    return bool(connection.execute(ANY).scalar_one())
 
 
 def revoke(connection: Connection, name: str, now: datetime) -> bool:

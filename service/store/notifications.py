@@ -1,12 +1,15 @@
 """Notifications: who is to be told of a job's end, and how far that has come. At least once, from these rows."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from datetime import datetime
 
-from sqlalchemy import Connection, insert, select, update
+from sqlalchemy import Connection, bindparam, insert, select, update
 
 from service.store.records import NotificationRecord
 from service.store.tables import FINAL, jobs, keys, notifications, verdicts
+
+RECORD = tuple(notifications.c[one.name] for one in fields(NotificationRecord))
+OF_JOB = select(*RECORD).where(notifications.c.job_id == bindparam("of_id"))
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -24,16 +27,15 @@ class Due:
     notify_secret: str | None
 
 
-def add(connection: Connection, job_id: str, url: str) -> None:
+def add(connection: Connection, job_id: str, url: str) -> NotificationRecord:
     """Somebody wants to be told."""
     connection.execute(insert(notifications), {"job_id": job_id, "url": url, "state": "waiting", "attempts": 0})
+    return NotificationRecord(url=url, state="waiting", attempts=0, next_at=None, last_at=None, last_answer=None)
 
 
 def of_job(connection: Connection, job_id: str) -> NotificationRecord | None:
     """The notification of one job."""
-    n = notifications.c
-    query = select(n.url, n.state, n.attempts, n.next_at, n.last_at, n.last_answer).where(n.job_id == job_id)
-    row = connection.execute(query).mappings().first()
+    row = connection.execute(OF_JOB, {"of_id": job_id}).mappings().first()
     return None if row is None else NotificationRecord(**row)
 
 

@@ -20,4 +20,4 @@ def store(connection: Connection, document: bytes, digest: str, now: datetime) -
 
 def load(connection: Connection, digest: str) -> str:
     """The document; a job's plan is always there."""
-    return str(connection.execute(select(plans.c.document).where(plans.c.digest == digest)).scalar_one())
+    return str(connection.execute(LOAD, {"of_digest": digest}).scalar_one())

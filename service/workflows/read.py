@@ -49,10 +49,7 @@ def list_datasets(
 def read_job(database: Database, caller: Caller, job_id: str) -> tuple[JobDetail, NotificationRecord | None]:
     """One job with its plan, its notification and, once it succeeded, its result. Raises NotFound."""
     with database.read() as connection:
-        found = jobs.detail(connection, job_id)
-        if found is None or not sees(caller, found.job):
-            raise NotFound(f"there is no job {job_id}")
-        return found, notifications.of_job(connection, job_id)
+        return job_seen(connection, caller, job_id)
 
 
 def read_events(
@@ -95,6 +92,14 @@ def list_verdicts(
     wanted = replace(wanted, submitted_by=caller.only_own)
     with database.read() as connection:
         return verdicts.issued(connection, wanted, after=after, limit=limit)
+
+
+def job_seen(connection: Connection, caller: Caller, job_id: str) -> tuple[JobDetail, NotificationRecord | None]:
+    """The same within a transaction."""
+    found = jobs.detail(connection, job_id)
+    if found is None or not sees(caller, found.job):
+        raise NotFound(f"there is no job {job_id}")
+    return found, notifications.of_job(connection, job_id)
 
 
 def sees(caller: Caller, job: JobRecord) -> bool:

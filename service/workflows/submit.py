@@ -21,11 +21,12 @@ from service.store.clock import new_id
 from service.store.codec import digest, plan_document
 from service.store.database import Database
 from service.store.jobs import NewJob
-from service.store.records import DatasetContent, DatasetRecord
+from service.store.records import DatasetContent, DatasetRecord, JobDetail, NotificationRecord
 from service.store.transport import Transport
 from service.workflows.callers import Caller
 from service.workflows.notify import check_url
 from service.workflows.plans import plan_named
+from service.workflows.read import job_seen
 from service.workflows.repeat import made_before
 
 RETRY_WHEN_FULL = 5
@@ -71,8 +72,8 @@ def submit_job(
     *,
     repeat_key: str | None,
     now: datetime,
-) -> str:
-    """Put in a job and answer its id; with a `repeat_key` (Idempotency-Key) that was used before, that job's id.
+) -> tuple[JobDetail, NotificationRecord | None]:
+    """Put in a job and answer it; with a `repeat_key` (Idempotency-Key) that was used before, that job as it now is.
 
     Raises InvalidInput, TooLarge, Overloaded, Forbidden.
     """
@@ -90,7 +91,7 @@ def submit_job(
     with database.write() as connection:
         before = made_before(connection, caller, repeat_key, asked_for, made_id=job_id, now=now)
         if before is not None:
-            return before
+            return job_seen(connection, caller, before)
         demand_room(connection, settings, 1)
         if asked.dataset is not None and observed is not None:
             dataset_id, _ = keep_dataset(connection, caller, asked.dataset, observed, dataset_digest, now)
@@ -107,10 +108,12 @@ def submit_job(
             priority=asked.priority,
         )
         add_jobs(connection, caller, [new], now)
+        notification = None
         if asked.notify_url is not None:
-            notifications.add(connection, job_id, asked.notify_url)
+            notification = notifications.add(connection, job_id, asked.notify_url)
     transport.send(job_id, asked.priority)
-    return job_id
+    job = jobs.waiting_record(new, now)
+    return JobDetail(job=job, plan=document.decode(), result=None, provenance=None), notification
 
 
 def observed_of(content: DatasetContent, most: int) -> Observations:

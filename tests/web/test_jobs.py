@@ -2,6 +2,7 @@
 
 import hashlib
 import threading
+from pathlib import Path
 from typing import Any
 
 import pytest
@@ -9,10 +10,11 @@ import rfc8785
 from pydantic import TypeAdapter
 
 from service.client import Client, ProblemError
+from service.settings import Settings
 from service.web.schemas.common import PageOf
 from service.web.schemas.datasets import DatasetView
 from service.web.schemas.jobs import JobSummary, JobView, Verdict
-from tests.web.service import Service
+from tests.web.service import Service, running
 
 DATASET: dict[str, Any] = {
     "subject": "PT-1",
@@ -40,6 +42,37 @@ def test_answers_are_what_the_document_says(service: Service) -> None:
     assert view.result.chosen_degree == 1
     TypeAdapter(PageOf[JobSummary]).validate_json(service.http.get("/v1/jobs").content)
     TypeAdapter(Verdict).validate_json(service.http.get(f"/v1/jobs/{view.id}/verdict").content)
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {},
+        {"subject": "PT-2", "priority": 7, "plan": {"max_degree": 3}},
+        {"notify_url": "http://127.0.0.1:9/told"},
+    ],
+    ids=["bare", "with all", "notified"],
+)
+def test_the_first_answer_is_what_is_read_afterwards(tmp_path: Path, changes: dict[str, Any]) -> None:
+    """It is made of what was stored, without reading that again."""
+    settings = Settings(data_dir=tmp_path, notify_private=True, notify_secret="whsec_" + 32 * "A")
+    with running(settings) as service:
+        posted = service.http.post("/v1/jobs", json={"dataset": DATASET} | changes)
+        assert posted.status_code == 202, posted.text
+        assert posted.json() == service.http.get(posted.headers["location"]).json()
+
+
+def test_a_post_sent_again_is_answered_with_the_job_as_it_is_now(service: Service) -> None:
+    def send() -> dict[str, Any]:
+        key = {"Idempotency-Key": "one"}
+        return dict(service.http.post("/v1/jobs", json={"dataset": DATASET}, headers=key).json())
+
+    first = send()
+    service.work()
+    again = send()
+    assert (first["id"], first["state"]) == (again["id"], "queued")
+    assert again == service.http.get(f"/v1/jobs/{first['id']}").json()
+    assert again["state"] == "succeeded"
 
 
 def test_digests_can_be_verified_by_anyone(service: Service) -> None:

@@ -100,7 +100,7 @@ def _submit(context: Context, caller: Caller, given: dict[str, str], body: bytes
         plan=None if said.plan_id else _plan(said),
         plan_id=said.plan_id,
     )
-    return submit_job(
+    detail, _ = submit_job(
         context.database,
         context.transport,
         context.settings,
@@ -109,6 +109,7 @@ def _submit(context: Context, caller: Caller, given: dict[str, str], body: bytes
         repeat_key=None,
         now=context.now(),
     )
+    return detail.job.id
 
 
 def _content(said: TryBody, body: bytes) -> DatasetContent:

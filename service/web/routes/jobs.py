@@ -7,7 +7,7 @@ from fastapi import APIRouter, Depends, Query, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
-from service.store.records import JobFilter
+from service.store.records import JobDetail, JobFilter, NotificationRecord
 from service.store.tables import FINAL, State
 from service.web.answers import document_response, json_response
 from service.web.callers import CallerDep
@@ -55,13 +55,13 @@ async def post_job(
 
     With `Prefer: wait=N` (RFC 7240) the answer comes when the job has ended, or after N seconds.
     """
-    job_id = await run_in_threadpool(_submit, context, caller, body, repeat_key(key))
-    request.state.job_id = job_id  # for the log
+    detail, notification = await run_in_threadpool(_submit, context, caller, body, repeat_key(key))
+    job_id = request.state.job_id = detail.job.id  # for the log
     preferred = preferences(request.headers.getlist("prefer"))
     seconds = seconds_to_wait(preferred, most=context.settings.wait_seconds)
-    if seconds:
+    if seconds and detail.job.state not in FINAL:
         await context.waiting.until_ended(job_id, seconds, gone=request.receive)
-    detail, notification = await run_in_threadpool(read_job, context.database, caller, job_id)
+        detail, notification = await run_in_threadpool(read_job, context.database, caller, job_id)
     ended = detail.job.state in FINAL
     headers = {"Location": f"/v1/jobs/{job_id}"}
     if not ended:
@@ -73,7 +73,9 @@ async def post_job(
     return document_response(job_document(detail, notification), status, headers)
 
 
-def _submit(context: Context, caller: Caller, body: JobBody, key: str | None) -> str:
+def _submit(
+    context: Context, caller: Caller, body: JobBody, key: str | None
+) -> tuple[JobDetail, NotificationRecord | None]:
     asked = Submission(
         plan=None if body.plan is None else body.plan.plan("/plan"),
         plan_id=body.plan_id,
