@@ -57,7 +57,7 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     degree = choice.degree
     working_range = _working_range(full.domain, plan.working_range)
     known = plan.known_uncertainty
-    curve, exact = describe_curve(full, degree, absolute=known)
+    curve, exact = describe_curve(full, degree, absolute=known, digits=weighted.digits)
     coefficients = np.array(curve.coefficients)
     monotonic = degree > 0 and is_monotonic(coefficients, full.domain, working_range)
     slope = slope_range(coefficients, full.domain, working_range)

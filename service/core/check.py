@@ -45,7 +45,7 @@ def _weights(o: Observations, plan: Plan) -> Iterator[FieldError]:
     elif plan.known_uncertainty and o.u_y is None:
         yield FieldError("/plan/known_uncertainty", "needs u_y in the dataset")
     if o.u_x is not None and o.u_y is None:
-        yield FieldError("/dataset/u_x", "needs u_y as well: the effective variance is made of both")
+        yield FieldError("/dataset/u_x", "needs u_y as well: a point is adjusted by the ratio of both")
 
 
 def _range(o: Observations, plan: Plan) -> Iterator[FieldError]:

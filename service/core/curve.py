@@ -1,6 +1,7 @@
 """The chosen curve: coefficients in both bases, their uncertainty, slope and monotonicity."""
 
 import math
+from dataclasses import replace
 from fractions import Fraction
 from functools import lru_cache
 
@@ -16,9 +17,14 @@ from service.core.tails import f_tail, t_two_sided, z_two_sided
 DIGITS_OF_A_DOUBLE = 15
 
 
-def describe_curve(fits: NestedFits, degree: int, *, absolute: bool) -> tuple[Curve, ExactFit | None]:
-    """The curve of one degree. With absolute weights (`known_uncertainty`) the variance is 1, not RSS/df."""
-    exact = exact_fit(fits.x, fits.y, fits.weights, degree, intercept=fits.intercept)
+def describe_curve(
+    fits: NestedFits, degree: int, *, absolute: bool, digits: int = DIGITS_OF_A_DOUBLE
+) -> tuple[Curve, ExactFit | None]:
+    """The curve of one degree. With absolute weights (`known_uncertainty`) the variance is 1, not RSS/df.
+
+    digits: how many x and weights are good for, where they were computed and not given.
+    """
+    exact = exact_fit(fits.x, fits.y, fits.weights, degree, intercept=fits.intercept, domain=fits.domain)
     coefficients = np.array(exact.chebyshev) if exact else fits.chebyshev(degree)
     df = fits.df(degree)
     rss = exact.rss if exact else float(fits.rss[degree])
@@ -28,6 +34,10 @@ def describe_curve(fits: NestedFits, degree: int, *, absolute: bool) -> tuple[Cu
     covariance = None
     if variance is not None:
         covariance = tuple(tuple(row) for row in (fits.unscaled_covariance(degree) * variance).tolist())
+    if exact:
+        power = _exact_power(exact, rss, df, absolute)
+    else:
+        power = _rounded_power(fits, degree, variance, df, absolute)
     tss = fits.tss if fits.intercept else float(np.sum(fits.weights * fits.y**2))
     r2 = exact.r2 if exact else (1 - rss / tss if tss > 0 else None)
     curve = Curve(
@@ -35,7 +45,7 @@ def describe_curve(fits: NestedFits, degree: int, *, absolute: bool) -> tuple[Cu
         domain=fits.domain,
         coefficients=tuple(coefficients.tolist()),
         covariance=covariance,
-        power=_exact_power(exact, rss, df, absolute) if exact else _rounded_power(fits, degree, variance, df, absolute),
+        power=power if power.digits <= digits else replace(power, digits=digits),
         residual_sd=math.sqrt(rss / df) if df > 0 else None,
         degrees_of_freedom=df,
         r2=r2,

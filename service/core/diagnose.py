@@ -48,7 +48,7 @@ def diagnose(
     if fits.n <= MOST_POINTS_LISTED:
         residual = fits.residuals[:, degree] / np.sqrt(fits.weights)
         points = Points(
-            fitted=tuple((fits.y - residual).tolist()),
+            fitted=tuple((observations.y - residual).tolist()),
             residual=tuple(residual.tolist()),
             leverage=tuple(np.minimum(fits.leverage[:, degree], 1.0).tolist()),
             studentised=_or_none(studentised),

@@ -36,17 +36,20 @@ class ExactFit:
     f: float | None
 
 
-def exact_fit(x: Floats, y: Floats, weights: Floats, degree: int, *, intercept: bool) -> ExactFit | None:
+def exact_fit(
+    x: Floats, y: Floats, weights: Floats, degree: int, *, intercept: bool, domain: tuple[float, float]
+) -> ExactFit | None:
     """Solve exactly; None where n or the number of digits make that too dear.
 
     x, y, weights: (n,) finite; weights > 0, taken at their double value (1/variance up to a factor).
+    domain: what the Chebyshev coefficients are over.
     """
     if x.size > MOST_POINTS or degree == 0 and not intercept:
         return None
-    xs, x_shift = _integers(x.tolist())
+    xs, x_shift = _integers([*x.tolist(), *domain])
     ys, y_shift = _integers(y.tolist())
     common = math.gcd(*xs)
-    us = [v // common for v in xs]
+    *us, low, high = (v // common for v in xs)
     equal = bool((weights == weights[0]).all())
     w0 = float(weights[0]) if equal else 1.0
     ws, w_shift = ([1] * len(us), 0) if equal else _integers(weights.tolist())
@@ -73,7 +76,7 @@ def exact_fit(x: Floats, y: Floats, weights: Floats, degree: int, *, intercept: 
         power=tuple(power),
         power_sd=tuple(sd),
         t=tuple(t),
-        chebyshev=_chebyshev(solved.solution, det, first, us, scale),
+        chebyshev=_chebyshev(solved.solution, det, first, (low, high), scale),
         rss_below=tuple(scale.sum_of_squares(r, d) for r, d in zip(solved.rss, solved.dets, strict=True)),
         rss=scale.sum_of_squares(rss, det),
         r2=_ratio(explained, total[0] * det) if total[0] else None,
@@ -168,9 +171,9 @@ def _normal_equations(
     return matrix, total
 
 
-def _chebyshev(solution: list[int], det: int, first: int, us: list[int], scale: _Scale) -> tuple[float, ...]:
+def _chebyshev(solution: list[int], det: int, first: int, ends: tuple[int, int], scale: _Scale) -> tuple[float, ...]:
     """Exact change of basis: Horner's scheme in u = (2M + 2H t)/4 with 2t T_j = T_{j+1} + T_|j-1|."""
-    low, high = min(us), max(us)
+    low, high = ends
     twice_middle, half = 2 * (low + high), high - low
     coefficients = [0] * first + solution
     degree = len(coefficients) - 1

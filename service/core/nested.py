@@ -158,9 +158,11 @@ class Design:
     rounding: float
 
     @classmethod
-    def of(cls, x: Floats, y: Floats, *, top: int, intercept: bool = True) -> "Design":
-        """For degrees 0..top; x, y of shape (n,), top < number of distinct x."""
-        lo, hi = float(x.min()), float(x.max())
+    def of(
+        cls, x: Floats, y: Floats, *, top: int, intercept: bool = True, domain: tuple[float, float] | None = None
+    ) -> "Design":
+        """For degrees 0..top; x, y of shape (n,), top < number of distinct x. domain: the range of x if None."""
+        lo, hi = (float(x.min()), float(x.max())) if domain is None else domain
         low, high = float(y.min()), float(y.max())
         spread = (high - low) / (hi - lo) * max(abs(lo), abs(hi))
         return cls(

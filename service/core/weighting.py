@@ -1,26 +1,26 @@
 """Weights: as asked, from u_y, or chosen by restricted likelihood among 1, 1/|x| and 1/x^2.
 
 Restricted (residual) maximum likelihood: Patterson & Thompson, Biometrika 58 (1971) 545; Harville,
-JASA 72 (1977) 320. Errors in x enter by the effective variance: Orear, Am. J. Phys. 50 (1982) 912.
+JASA 72 (1977) 320. Errors in x: service.core.errors_in_x.
 """
 
 import math
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.polynomial import chebyshev
 
-from service.core.curve import derivative
+from service.core.curve import DIGITS_OF_A_DOUBLE
+from service.core.errors_in_x import DIGITS, adjust
 from service.core.nested import Design, NestedFits
 from service.core.observations import Floats, Observations
 from service.core.plan import Plan
 from service.core.result import WeightChoice, WeightModel
 from service.core.screen import Walked, choose_with_screen
-from service.errors import InvalidInput
 
 GAIN_NEEDED = 2.0  # of log-likelihood, to leave equal weights
 RATIO_NEEDED = 1.5  # of the largest |x| to the least, for 1/x to differ from 1
-EFFECTIVE_ROUNDS = 20
+ROUNDS = 20  # of adjusting x
+UNCHANGED = 1e-9  # relative change of the weights, below which x stays as it is
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)
@@ -36,6 +36,8 @@ class Weighted:
     walked: Walked | None
     absolute: bool
     """True when the weights are 1/variance in the unit of y, so that a chi-square has meaning."""
+    digits: int = DIGITS_OF_A_DOUBLE
+    """Of the coefficients, as far as weights and x are known."""
 
 
 def weigh(observations: Observations, plan: Plan, *, top: int, reach: int) -> Weighted:
@@ -116,33 +118,33 @@ def _compare(observations: Observations, plan: Plan, top: int, reach: int) -> We
 
 def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: int) -> Weighted:
     assert observations.u_y is not None
-    x, y = observations.x, observations.y
-    variance = observations.u_y**2
-    design = Design.of(x, y, top=reach, intercept=plan.intercept)
-    full = design.fit(1.0 / variance)
-    used, why = "u_y", "1/u_y^2, from the uncertainties given"
+    design = Design.of(observations.x, observations.y, top=reach, intercept=plan.intercept)
+    full = design.fit(1.0 / observations.u_y**2)
+    used, why, digits = "u_y", "1/u_y^2, from the uncertainties given", DIGITS_OF_A_DOUBLE
     if observations.u_x is not None:
-        used, why = "u_y and u_x", "1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given"
-        for _ in range(EFFECTIVE_ROUNDS):
-            fits = full.up_to(top)
-            walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
-            degree = min(max(walked.degree, plan.min_degree), fits.top)
-            slope = slope_at(fits, degree, x)
-            with np.errstate(over="ignore"):
-                effective = variance + (slope * observations.u_x) ** 2
-            if not np.isfinite(effective).all():
-                raise InvalidInput.at("/dataset/u_x", "is too large: it swamps the whole range of the readings")
-            new = 1.0 / effective
-            change = float(np.max(np.abs(new / fits.weights - 1)))
-            full = design.fit(new)
-            if change < 1e-10:
-                break
+        full, how = _with_errors_in_x(observations, plan, full, top, reach)
+        used, digits = "u_y and u_x", DIGITS
+        why = f"1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given, {how}"
     choice = WeightChoice(asked=plan.weights, used=used, common_degree=None, compared=(), why=why)
-    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=True)
+    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=True, digits=digits)
 
 
-def slope_at(fits: NestedFits, degree: int, x: Floats) -> Floats:
-    """dp/dx of one fit at x."""
-    lo, hi = fits.domain
-    slope = derivative(fits.chebyshev(degree)) * (2.0 / (hi - lo))
-    return np.asarray(chebyshev.chebval(((x - lo) + (x - hi)) / (hi - lo), slope))
+def _with_errors_in_x(
+    observations: Observations, plan: Plan, full: NestedFits, top: int, reach: int
+) -> tuple[NestedFits, str]:
+    """Choose, adjust x for the degree chosen, fit again, until nothing changes; and how that ended."""
+    domain = full.domain
+    how = ""
+    for _ in range(ROUNDS):
+        fits = full.up_to(top)
+        walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
+        degree = min(max(walked.degree, plan.min_degree), fits.top)
+        moved = adjust(observations, full, degree)
+        change = float(np.max(np.abs(moved.weights / full.weights - 1)))
+        full = Design.of(moved.x, moved.y, top=reach, intercept=plan.intercept, domain=domain).fit(moved.weights)
+        how = f"at the x adjusted by orthogonal distance regression for degree {degree}"
+        if not moved.settled:
+            how = "at the x given: orthogonal distance regression did not settle"
+        if change < UNCHANGED:
+            break
+    return full, how

@@ -12,7 +12,7 @@ from service.core.result import Result
 from service.store.clock import rfc3339
 from service.store.records import Claim
 
-NUMERIC = ("numpy", "scipy", "statsmodels", "scikit-learn")
+NUMERIC = ("numpy", "scipy", "statsmodels", "scikit-learn", "odrpack")
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)

@@ -21,7 +21,7 @@ from service.core.nested import fit_all
 from service.core.plan import Plan, Resampling
 from service.core.weighting import restricted_log_likelihood
 from tests.benchmarks.null_size import sizes
-from tests.core.data import Floats, calibration, close, fixed, noise, run
+from tests.core.data import Floats, calibration, close, noise, run
 
 
 def test_spending() -> None:
@@ -269,17 +269,3 @@ def test_restricted_likelihood_by_contrasts() -> None:
         values.append(-0.5 * (6 * math.log(s2) + np.linalg.slogdet(covariance)[1]))
         ours.append(restricted_log_likelihood(fit_all(x, y, w, top=2), 2))
     assert np.ptp(np.array(values) - ours) < 1e-10
-
-
-def test_errors_in_x_enter_by_the_effective_variance() -> None:
-    """A line: u^2 = u_y^2 + slope^2 u_x^2, the slope that of the fit itself."""
-    x = np.linspace(1, 10, 12)
-    u_x, u_y = np.geomspace(0.01, 0.3, 12), np.full(12, 0.1)
-    y = 3 * x + 0.2 * noise(12)
-    found = run(x, y, fixed(1, weights="u_y"), u_x=u_x, u_y=u_y)
-    slope = found.curve.power.coefficients[1]
-    assert slope is not None
-    w = 1 / (u_y**2 + (slope * u_x) ** 2)
-    again = np.polyfit(x, y, 1, w=np.sqrt(w))
-    assert close(slope, float(again[0]), 1e-8)
-    assert found.weights.used == "u_y and u_x"
