@@ -24,7 +24,7 @@ from service.core.requirements import answer_requirements
 from service.core.result import Result
 from service.core.screen import studentised
 from service.core.unseen import TERMS, unseen_bend
-from service.core.weighting import weigh
+from service.core.weighting import fits_of_curve, weigh
 from service.errors import InvalidInput
 
 __all__ = ["analyse", "check"]
@@ -48,16 +48,16 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
     if tried.top < plan.min_degree:
         message = f"values lie too close together to tell a curve of degree {plan.min_degree} from a lower one"
         raise InvalidInput.at("/dataset/x", message)
-    full = weighted.full
     folds = make_folds(observations, plan.resampling)
     held = cross_validate(tried, folds, lambda done, of: say("cross_validate", done, of))
     say("choose", 0, 1)
     by_criterion = criteria(tried)
     choice = choose(tried, held, by_criterion, plan, weighted.walked)
     degree = choice.degree
+    full, weights, digits = fits_of_curve(observations, weighted, degree)
     working_range = _working_range(full.domain, plan.working_range)
     known = plan.known_uncertainty
-    curve, exact = describe_curve(full, degree, absolute=known, digits=weighted.digits)
+    curve, exact = describe_curve(full, degree, absolute=known, digits=digits)
     coefficients = np.array(curve.coefficients)
     monotonic = degree > 0 and is_monotonic(coefficients, full.domain, working_range)
     slope = slope_range(coefficients, full.domain, working_range)
@@ -109,7 +109,7 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
         plan,
         p_values=choice.walked.p,
         lack_of_fit=found.lack_of_fit,
-        exact=exact,
+        exact=exact if full is weighted.full else None,
         working_range=working_range,
     )
     return Result(
@@ -118,7 +118,7 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
         working_range=working_range,
         chosen_degree=degree,
         candidates=tuple(candidates),
-        weights=weighted.choice,
+        weights=weights,
         decision=choice.decision,
         curve=curve,
         diagnostics=diagnostics,

@@ -5,12 +5,12 @@ JASA 72 (1977) 320. Errors in x: service.core.errors_in_x.
 """
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from service.core.curve import DIGITS_OF_A_DOUBLE
-from service.core.errors_in_x import DIGITS, adjust
+from service.core.errors_in_x import DIGITS, effective_weights, regress, slope_at
 from service.core.nested import Design, NestedFits
 from service.core.observations import Floats, Observations
 from service.core.plan import Plan
@@ -19,8 +19,9 @@ from service.core.screen import Walked, choose_with_screen
 
 GAIN_NEEDED = 2.0  # of log-likelihood, to leave equal weights
 RATIO_NEEDED = 1.5  # of the largest |x| to the least, for 1/x to differ from 1
-ROUNDS = 20  # of adjusting x
-UNCHANGED = 1e-9  # relative change of the weights, below which x stays as it is
+ROUNDS = 20
+WITH_ERRORS_IN_X = "u_y and u_x"
+UNCHANGED = 1e-10  # relative change of the weights
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)
@@ -36,8 +37,6 @@ class Weighted:
     walked: Walked | None
     absolute: bool
     """True when the weights are 1/variance in the unit of y, so that a chi-square has meaning."""
-    digits: int = DIGITS_OF_A_DOUBLE
-    """Of the coefficients, as far as weights and x are known."""
 
 
 def weigh(observations: Observations, plan: Plan, *, top: int, reach: int) -> Weighted:
@@ -54,6 +53,19 @@ def weigh(observations: Observations, plan: Plan, *, top: int, reach: int) -> We
     full = Design.of(x, y, top=reach, intercept=plan.intercept).fit(power_weights(x, asked))
     choice = WeightChoice(asked=asked, used=asked, common_degree=None, compared=(), why="as the plan asks")
     return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=False)
+
+
+def fits_of_curve(observations: Observations, weighted: Weighted, degree: int) -> tuple[NestedFits, WeightChoice, int]:
+    """The fits that the chosen curve is taken from, the weights in words, and the digits that its coefficients hold."""
+    full, choice = weighted.full, weighted.choice
+    if choice.used != WITH_ERRORS_IN_X:
+        return full, choice, DIGITS_OF_A_DOUBLE
+    found = regress(observations, full, degree)
+    how = "orthogonal distance regression"
+    if not found.settled:
+        how = "the effective variance too, since orthogonal distance regression did not settle"
+    why = f"{choice.why}; the chosen curve by {how}"
+    return found.fits, replace(choice, why=why), DIGITS if found.settled else DIGITS_OF_A_DOUBLE
 
 
 def power_weights(x: Floats, name: str) -> Floats:
@@ -120,31 +132,26 @@ def _from_uncertainty(observations: Observations, plan: Plan, top: int, reach: i
     assert observations.u_y is not None
     design = Design.of(observations.x, observations.y, top=reach, intercept=plan.intercept)
     full = design.fit(1.0 / observations.u_y**2)
-    used, why, digits = "u_y", "1/u_y^2, from the uncertainties given", DIGITS_OF_A_DOUBLE
+    used, why = "u_y", "1/u_y^2, from the uncertainties given"
     if observations.u_x is not None:
-        full, how = _with_errors_in_x(observations, plan, full, top, reach)
-        used, digits = "u_y and u_x", DIGITS
-        why = f"1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given, {how}"
+        full = _with_effective_variance(observations, plan, full, design, top)
+        used = WITH_ERRORS_IN_X
+        why = "1/(u_y^2 + (dp/dx)^2 u_x^2), the effective variance, from the uncertainties given"
     choice = WeightChoice(asked=plan.weights, used=used, common_degree=None, compared=(), why=why)
-    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=True, digits=digits)
+    return Weighted(full=full, fits=full.up_to(top), choice=choice, walked=None, absolute=True)
 
 
-def _with_errors_in_x(
-    observations: Observations, plan: Plan, full: NestedFits, top: int, reach: int
-) -> tuple[NestedFits, str]:
-    """Choose, adjust x for the degree chosen, fit again, until nothing changes; and how that ended."""
-    domain = full.domain
-    how = ""
+def _with_effective_variance(
+    observations: Observations, plan: Plan, full: NestedFits, design: Design, top: int
+) -> NestedFits:
+    """Slopes from the curve that `least_bend` picks, weights from the slopes, until they agree."""
     for _ in range(ROUNDS):
         fits = full.up_to(top)
         walked = choose_with_screen(fits, known_uncertainty=plan.known_uncertainty)
         degree = min(max(walked.degree, plan.min_degree), fits.top)
-        moved = adjust(observations, full, degree)
-        change = float(np.max(np.abs(moved.weights / full.weights - 1)))
-        full = Design.of(moved.x, moved.y, top=reach, intercept=plan.intercept, domain=domain).fit(moved.weights)
-        how = f"at the x adjusted by orthogonal distance regression for degree {degree}"
-        if not moved.settled:
-            how = "at the x given: orthogonal distance regression did not settle"
+        new = effective_weights(observations, slope_at(fits, degree, observations.x))
+        change = float(np.max(np.abs(new / full.weights - 1)))
+        full = design.fit(new)
         if change < UNCHANGED:
             break
-    return full, how
+    return full

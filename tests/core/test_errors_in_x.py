@@ -66,7 +66,7 @@ def test_curve_and_points_are_where_the_sum_of_squares_is_least(degree: int, u_x
     grid = np.linspace(lo, hi, 50)
     ours = chebyshev.chebval((2 * grid - lo - hi) / (hi - lo), np.array(found.curve.coefficients))
     assert np.allclose(ours, value(best.x[:rows], grid), rtol=1e-7, atol=1e-8)
-    assert close(found.candidates[0].rss, 2 * best.cost, 1e-9)
+    assert close(found.curve.residual_sd, (2 * best.cost / (25 - rows)) ** 0.5, 1e-9)
     if intercept:  # its covariance, from the Jacobian in all unknowns
         covariance = np.linalg.inv(best.jac.T @ best.jac)[:rows, :rows]
         assert found.curve.covariance is not None
@@ -89,7 +89,30 @@ def test_the_degree_is_chosen_with_them() -> None:
     sure = run(x, y, Plan(known_uncertainty=True), u_y=u_y)
     unsure = run(x, y, Plan(known_uncertainty=True), u_x=np.full(20, 0.3), u_y=u_y)
     assert sure.chosen_degree > unsure.chosen_degree == 1
-    assert unsure.weights.why.endswith("orthogonal distance regression for degree 1")
+    assert unsure.weights.why.endswith("the chosen curve by orthogonal distance regression")
+
+
+@pytest.mark.parametrize("rule", ["least_bend", "aicc", "bic", "lowest_cv", "one_standard_error"])
+def test_whatever_chooses_the_curve_is_that_of_its_degree(rule: str) -> None:
+    """Choosing and regressing do not wait for each other, so they cannot go round in circles."""
+    for seed in range(40):
+        x, y, given = bent(15, 0.3, 0.2, seed=seed)
+        chosen = run(x, y, Plan(rule=rule), **given)  # type: ignore[arg-type]
+        alone = run(x, y, of_degree(chosen.chosen_degree), **given)
+        if "did not settle" not in chosen.weights.why + alone.weights.why:
+            assert np.allclose(chosen.curve.coefficients, alone.curve.coefficients, rtol=1e-6, atol=1e-6)
+
+
+def test_candidates_are_compared_by_the_effective_variance() -> None:
+    """A line: u^2 = u_y^2 + slope^2 u_x^2, the slope that of the same fit."""
+    x, y, given = bent(25, 0.2, 0.05)
+    found = run(x, y, of_degree(1), **given)
+    slope = 0.0
+    for _ in range(100):
+        w = 1 / (given["u_y"] ** 2 + (slope * given["u_x"]) ** 2)
+        line = np.polyfit(x, y, 1, w=np.sqrt(w))
+        slope = float(line[0])
+    assert close(found.candidates[0].rss, float(np.sum(w * (y - np.polyval(line, x)) ** 2)), 1e-7)
 
 
 @pytest.mark.parametrize(("in_x", "in_y"), [(1e-12, 1e9), (1e7, 1e-20), (1e-30, 1e-30), (1e40, 1e-40)])
