@@ -4,7 +4,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
-from service.web.figures import marks
+from service.web.figures import limits, marks
 from service.web.figures.data import FigureData
 from service.web.figures.style import ACCENT, BAND, LIMIT, QUIET, SIZE, name_axis, say_nothing_to_show, sheet
 
@@ -75,40 +75,11 @@ def unseen(data: FigureData) -> Figure:
             label="unseen bend" if sign < 0 else None,
             zorder=3,
         )
-    reach = _limits(panel, data, largest)
-    panel.set_ylim(-1.15 * reach, 1.15 * reach)
+    limits.draw(panel, data, largest)
     unit = f" ({data.y_unit})" if data.y_unit else ""
     name_axis(panel, x=data.x_label, y=f"error in {'y' if not unit else 'reading'}{unit}")
     figure.legend(loc="outside lower center", ncols=2)
     return figure
-
-
-def _limits(panel: Axes, data: FigureData, largest: float) -> float:
-    """Lines of what the plan allows; answers how far the panel must reach."""
-    x = data.grid(working=True)
-    allowed = data.permitted_at(x)
-    reach = largest
-    if allowed is not None:
-        reach = max(reach, min(float(allowed.max()), 6 * largest))
-        for sign in (-1, 1):
-            panel.plot(
-                x,
-                sign * allowed,
-                color=LIMIT,
-                linestyle=(0, (5, 2)),
-                gid="permitted-low" if sign < 0 else "permitted-high",
-                label="max. permissible error" if sign < 0 else None,
-                zorder=3,
-            )
-        if float(allowed.min()) > 1.15 * reach:
-            words = f"the maximum permissible error, {allowed.min():.3g} at least, lies outside"
-            panel.text(0.02, 0.97, words, va="top", color=LIMIT, fontsize=8.5, transform=panel.transAxes)
-    asked = data.plan["requirements"]["max_unseen_bend"]
-    if asked is not None:
-        reach = max(reach, min(float(asked), 6 * largest))
-        panel.axhline(float(asked), color=LIMIT, linestyle=(0, (5, 1, 1, 1)), gid="asked", label="largest bend allowed")
-        panel.axhline(-float(asked), color=LIMIT, linestyle=(0, (5, 1, 1, 1)), gid="asked-low")
-    return reach
 
 
 def _working_range(panel: Axes, data: FigureData) -> None:
