@@ -1,4 +1,7 @@
-"""Security headers of every response: nothing is framed, sniffed or loaded from elsewhere."""
+"""Security headers of every response of the application: nothing is framed, sniffed or loaded from elsewhere.
+
+That of an unexpected error, made outside every middleware, gets them in `problems.py`.
+"""
 
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 

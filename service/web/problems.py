@@ -24,6 +24,7 @@ from service.errors import (
     Unauthenticated,
     Unusable,
 )
+from service.web.headers import HEADERS, NOT_KEPT
 from service.web.methods import allowed
 from service.web.strict_json import UnsupportedType, field_errors
 
@@ -125,7 +126,8 @@ def _http(request: Request, error: Exception) -> Response:
 
 def _unknown(request: Request, error: Exception) -> Response:
     log.error("unexpected error", exc_info=error, extra={"request_id": getattr(request.state, "request_id", None)})
-    # Made outside every middleware, so the header is set here.
-    headers = {"X-Request-Id": str(getattr(request.state, "request_id", ""))}
+    # Made outside every middleware, so the headers are set here.
+    headers = {name.decode(): value.decode() for name, value in (*HEADERS, NOT_KEPT)}
+    headers["X-Request-Id"] = str(getattr(request.state, "request_id", ""))
     detail = "an unexpected error; it is in the log under this request_id"
     return problem(request, 500, "internal_error", detail, headers=headers)

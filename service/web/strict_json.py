@@ -74,10 +74,18 @@ def parse_json(body: bytes) -> Any:
 def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
     found = dict(pairs)
     if len(found) < len(pairs):
-        names = [name for name, _ in pairs]
-        twice = next(name for name in names if names.count(name) > 1)
-        raise MalformedInput.at("", f"the key {twice[:80]!r} stands twice in one object")
+        raise MalformedInput.at("", f"the key {_twice(pairs)[:80]!r} stands twice in one object")
     return found
+
+
+def _twice(pairs: list[tuple[str, Any]]) -> str:
+    """The first key that was there before, in one pass: an object may hold millions."""
+    seen: set[str] = set()
+    for name, _ in pairs:
+        if name in seen:
+            break
+        seen.add(name)
+    return name
 
 
 def media_type(request: Request) -> str:

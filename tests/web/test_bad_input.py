@@ -3,9 +3,13 @@
 from typing import Any
 
 import pytest
+from pydantic import ValidationError
 
 from service.core.plan import Plan
+from service.errors import InvalidInput, MalformedInput
+from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.plans import PlanBody
+from service.web.strict_json import parse_json, read_value
 from tests.web.service import Service
 
 GOOD: dict[str, Any] = {"subject": "A", "x": [1, 2, 3, 4, 5], "y": [1, 2, 3, 4, 5.1]}
@@ -165,3 +169,35 @@ def test_unknown_paths_and_methods_are_problems(service: Service) -> None:
 def test_the_plan_as_posted_has_the_defaults_of_the_core() -> None:
     assert PlanBody().plan("/plan") == Plan()
     assert PlanBody.model_validate({}).model_dump() == PlanBody().model_dump()
+
+
+def errors_of(value: Any) -> tuple[list[tuple[str, str]], int]:
+    """What is told of a dataset, and how many errors were collected for it."""
+    with pytest.raises(InvalidInput) as raised:
+        read_value(DatasetBody, value)
+    collected = raised.value.__cause__
+    assert isinstance(collected, ValidationError)
+    return [(one.pointer, one.message) for one in raised.value.errors], collected.error_count()
+
+
+def test_no_more_errors_are_collected_than_are_told() -> None:
+    """Half a million of them took 421 MB."""
+    many = 200_000
+    found, collected = errors_of(dataset(x=[1, 2] + [""] * many, y=[0.5] + [None] * many, series=["a", ""] * many))
+    assert found == [
+        ("/x/2", "must be a number"),
+        ("/y/1", "must be a number"),
+        ("/series/1", "string should have at least 1 character"),
+    ]
+    assert collected == len(found)
+    found, collected = errors_of({f"k{i}": i for i in range(many)} | GOOD | {"y": 1})
+    assert found == [("/y", "must be a list"), *((f"/k{i}", "is not a known key") for i in range(19))]
+    assert collected == 21
+    found, collected = errors_of(dataset(tags={f"k{i}": i for i in range(many)}))
+    assert (found, collected) == ([("/tags", f"holds {many} tags; at most 50 are taken")], 1)
+
+
+def test_a_key_that_stands_twice_among_very_many_is_named() -> None:
+    pairs = ", ".join(f'"k{i}": {i}' for i in range(200_000))
+    with pytest.raises(MalformedInput, match="the key 'k199999' stands twice"):
+        parse_json(f'{{{pairs}, "k199999": 0, "k1": 0}}'.encode())

@@ -10,6 +10,7 @@ import pyarrow.parquet as pq
 import pytest
 
 from service.errors import InvalidInput, MalformedInput, TooLarge
+from service.web import tables
 from service.web.parquet import read_parquet
 from service.web.tables import read_csv
 from tests.web.service import Service
@@ -92,6 +93,44 @@ def test_every_mistake_is_named_up_to_a_bound() -> None:
     with pytest.raises(InvalidInput) as raised:
         csv("x,y\n" + "1,q\n" * 50)
     assert [one.message.split(",")[0] for one in raised.value.errors] == [f"line {i}" for i in range(2, 22)]
+
+
+def test_one_wrong_cell_of_many_is_found_without_asking_pyarrow_of_each(monkeypatch: pytest.MonkeyPatch) -> None:
+    asked = []
+    whole = tables.pc.cast
+    monkeypatch.setattr(tables.pc, "cast", lambda *words: asked.append(words) or whole(*words))
+    with pytest.raises(InvalidInput) as raised:
+        csv("x,y\n" + "-1.5,.25e-3\n" * 20_000 + "1,q\n")
+    assert [one.pointer for one in raised.value.errors] == ["/y/20000"]
+    assert len(asked) == 3  # the two columns as a whole, and the cell
+
+
+def test_no_more_lines_are_read_than_mistakes_are_named(monkeypatch: pytest.MonkeyPatch) -> None:
+    looked_at = []
+    whole = tables._not_a_number
+    monkeypatch.setattr(tables, "_not_a_number", lambda text: looked_at.append(text) or whole(text))
+    with pytest.raises(InvalidInput) as raised:
+        csv("x,y\n" + "1,q\n" * 20_000)
+    assert len(raised.value.errors) == tables.MOST_ERRORS
+    assert len(looked_at) == 2 * tables.MOST_ERRORS
+
+
+@pytest.mark.parametrize("text", ["x,y" + "a" * 140_000, '"x,y\n1,2', "x," + '"' + "y" * 140_000], ids=len)
+def test_a_header_that_is_none_is_refused(text: str) -> None:
+    with pytest.raises(InvalidInput) as raised:
+        csv(text + "\n1,2\n")
+    assert all(one.message for one in raised.value.errors)
+
+
+def test_a_very_long_field_is_malformed(service: Service) -> None:
+    long = "1" * 140_000
+    for text, status in ((f"\n{long},y\n1,2\n", 400), (f"x,y\n1,2\n{long},q\n", 422)):
+        answer = service.http.post(
+            "/v1/datasets?subject=A", content=text.encode(), headers={"Content-Type": "text/csv"}
+        )
+        assert answer.status_code == status, answer.text
+        assert "larger than field limit" in answer.json()["errors"][0]["message"]
+        assert answer.json()["errors"][0]["message"].startswith(("line 2, the header", "line 3"))
 
 
 @pytest.mark.parametrize("body", [b"", b"\n\n", b" ", b"\xef\xbb\xbf", b"\xff\xfex\x00,\x00y\x00", b"x,y\n\xff,1\n"])

@@ -11,6 +11,7 @@ from typing import Any
 import pytest
 
 from service.settings import Settings
+from service.web.headers import HEADERS
 from service.workflows.callers import create_key
 from tests.web.service import Service, running
 
@@ -339,3 +340,21 @@ def test_security_headers_stand_on_every_answer(open_service: Service) -> None:
         assert headers["referrer-policy"] == "no-referrer"
         assert "default-src 'none'" in headers["content-security-policy"]
     assert open_service.http.get("/v1/jobs").headers["cache-control"] == "no-store"
+
+
+def test_an_unexpected_error_has_the_security_headers_once(
+    open_service: Service, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """It is answered outside every middleware."""
+
+    def fall(*_: object, **__: object) -> None:
+        raise RuntimeError("made by a test")
+
+    monkeypatch.setattr("service.web.routes.jobs.list_jobs", fall)
+    broken = open_service.http.get("/v1/jobs")
+    monkeypatch.undo()
+    assert (broken.status_code, broken.json()["code"]) == (500, "internal_error")
+    assert "made by a test" not in broken.text
+    whole = open_service.http.get("/v1/jobs").headers
+    for name in (*(name.decode() for name, _ in HEADERS), "cache-control"):
+        assert broken.headers.get_list(name) == whole.get_list(name) != []

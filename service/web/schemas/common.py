@@ -2,13 +2,24 @@
 
 import re
 from datetime import datetime
+from itertools import islice
 from typing import Annotated, Any, Generic, TypeVar
 
 from fastapi import Path
-from pydantic import AfterValidator, AwareDatetime, BaseModel, BeforeValidator, ConfigDict, Field, WithJsonSchema
+from pydantic import (
+    AfterValidator,
+    AwareDatetime,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    WithJsonSchema,
+    model_validator,
+)
 
 T = TypeVar("T")
 
+MOST_UNKNOWN = 20  # keys of one object
 NO_CONTROLS = r"^[^\x00-\x1f\x7f]*$"  # PostgreSQL text holds no NUL; logs and pages want no other controls either
 
 
@@ -53,6 +64,15 @@ class Body(BaseModel):
     """A request body."""
 
     model_config = ConfigDict(extra="forbid", strict=True, frozen=True)
+
+    @model_validator(mode="before")
+    @classmethod
+    def _few_unknown_keys(cls, value: Any) -> Any:
+        """Of very many unknown keys only the first are refused: each costs an error of a kilobyte."""
+        if not isinstance(value, dict) or len(value) <= len(cls.model_fields) + MOST_UNKNOWN:
+            return value
+        unknown = islice((name for name in value if name not in cls.model_fields), MOST_UNKNOWN)
+        return {name: value[name] for name in (*(one for one in value if one in cls.model_fields), *unknown)}
 
 
 class Answer(BaseModel):

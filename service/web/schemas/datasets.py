@@ -4,20 +4,32 @@ from datetime import datetime
 from typing import Annotated, Any
 
 import numpy as np
-from pydantic import Field, WithJsonSchema
+from pydantic import BeforeValidator, Field, WithJsonSchema
 
 from service.store.clock import rfc3339
 from service.store.records import DatasetContent, DatasetRecord
 from service.web.schemas.common import NO_CONTROLS, Answer, Body, Finite, Label, Line, Moment, given
 
-Column = Annotated[list[Finite], Field(min_length=3)]
+MOST_TAGS = 50
+# Of each column the first wrong item is named: half a million errors, of which few are shown, would fill the memory.
+Column = Annotated[list[Finite], Field(min_length=3, fail_fast=True)]
+
+
+def _few(value: Any) -> Any:
+    """Counted before any is looked at: pydantic would collect the errors of all of them first."""
+    if isinstance(value, dict) and len(value) > MOST_TAGS:
+        raise ValueError(f"holds {len(value)} tags; at most {MOST_TAGS} are taken")
+    return value
+
+
 # Written out: what pydantic writes for keys with a pattern lets other keys through.
 Tags = Annotated[
     dict[Label, Line],
+    BeforeValidator(_few),
     WithJsonSchema(
         {
             "type": "object",
-            "maxProperties": 50,
+            "maxProperties": MOST_TAGS,
             "propertyNames": {"type": "string", "minLength": 1, "maxLength": 200, "pattern": NO_CONTROLS},
             "additionalProperties": {"type": "string", "maxLength": 500, "pattern": NO_CONTROLS},
         }
@@ -45,7 +57,7 @@ class DatasetBody(Body):
     y: Column = Field(description="Response, in `y_unit`: what the instrument showed.")
     u_x: Column | None = Field(None, description="Standard uncertainty of each x, in `x_unit`; needs `u_y` as well.")
     u_y: Column | None = Field(None, description="Standard uncertainty of each y, in `y_unit`.")
-    series: Annotated[list[Label], Field(min_length=3)] | None = Field(
+    series: Annotated[list[Label], Field(min_length=3, fail_fast=True)] | None = Field(
         None, description="The pass each point belongs to: up and down, day 1 and day 2."
     )
     title: Line | None = None
@@ -57,7 +69,7 @@ class DatasetBody(Body):
         None, description="Points whose x differ by no more than this count as one level; absent: equal x only."
     )
     measured_at: Moment | None = Field(None, description="When it was measured, with time zone (RFC 3339).")
-    tags: Tags | None = Field(None, max_length=50, description="Anything else worth keeping.")
+    tags: Tags | None = Field(None, max_length=MOST_TAGS, description="Anything else worth keeping.")
 
     def content(self) -> DatasetContent:
         """The same as the store keeps it."""
