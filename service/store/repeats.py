@@ -19,6 +19,15 @@ class Made:
     fingerprint: str
 
 
+def find(connection: Connection, *, submitted_by: str, key: str, now: datetime) -> Made | None:
+    """What the key stands for, without taking it."""
+    query = select(repeats.c.made_id, repeats.c.fingerprint).where(
+        repeats.c.submitted_by == submitted_by, repeats.c.key == key, repeats.c.created_at >= now - KEPT
+    )
+    row = connection.execute(query).first()
+    return None if row is None else Made(id=row.made_id, fingerprint=row.fingerprint)
+
+
 def claim(
     connection: Connection, *, submitted_by: str, key: str, fingerprint: str, made_id: str, now: datetime
 ) -> Made | None:

@@ -18,7 +18,7 @@ from service.store.jobs import NewJob
 from service.store.records import DatasetContent, Page
 from service.store.transport import Transport
 from service.workflows.callers import Caller
-from service.workflows.repeat import made_before
+from service.workflows.repeat import known_before, made_before
 from service.workflows.run import describe
 from service.workflows.submit import add_jobs, below, demand_room, keep_dataset, observed_of
 
@@ -52,11 +52,16 @@ def submit_batch(
         raise TooLarge(f"the batch has {len(posted)} datasets; at most {settings.batch_size} are taken")
     checked = [_checked(one, plan, settings) for one in posted]
     good = [one for one in checked if not isinstance(one, dict)]
-    with database.read() as connection:
-        demand_room(connection, settings, len(good))  # before the datasets are stored, and again with the jobs
-    dataset_ids = _keep_datasets(database, caller, good, now)
     document = plan_document(plan)
     plan_digest, batch_id = digest(document), new_id()
+    named = [digest(canonical(one)) if isinstance(one, dict) else one[2] for one in checked]
+    asked_for = [*named, plan_digest, priority]
+    with database.read() as connection:  # before the datasets are stored, and again with the jobs
+        before = known_before(connection, caller, repeat_key, asked_for, now=now)
+        if before is not None:
+            return before
+        demand_room(connection, settings, len(good))
+    dataset_ids = _keep_datasets(database, caller, good, now)
     new = [
         NewJob(
             job_id=new_id(),
@@ -70,13 +75,11 @@ def submit_batch(
     ]
     taken = iter(new)
     items = [(None, one) if isinstance(one, dict) else (next(taken).job_id, None) for one in checked]
-    named = [digest(canonical(one)) if isinstance(one, dict) else one[2] for one in checked]
     with database.write() as connection:
-        asked_for = [*named, plan_digest, priority]
         before = made_before(connection, caller, repeat_key, asked_for, made_id=batch_id, now=now)
         if before is not None:
             return before
-        demand_room(connection, settings, len(new))
+        demand_room(connection, settings, len(new), outcome="the datasets were stored, no job was put in")
         plans.store(connection, document, plan_digest, now)
         if new:
             add_jobs(connection, caller, new, now)

@@ -130,11 +130,13 @@ def observed_of(content: DatasetContent, most: int) -> Observations:
     )
 
 
-def demand_room(connection: Connection, settings: Settings, jobs_to_come: int) -> None:
-    """Raises Overloaded if so many more jobs would be more than may wait."""
+def demand_room(
+    connection: Connection, settings: Settings, jobs_to_come: int, *, outcome: str = "nothing was stored"
+) -> None:
+    """Raises Overloaded, which says the `outcome`, if so many more jobs would be more than may wait."""
     most = settings.queue_depth
     if jobs.waiting(connection, at_most=most) + jobs_to_come > most:
-        message = f"the queue is full: at most {most} jobs may wait; nothing was stored"
+        message = f"the queue is full: at most {most} jobs may wait; {outcome}"
         raise Overloaded(message, retry_after=RETRY_WHEN_FULL, code="queue_full")
 
 

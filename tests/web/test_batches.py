@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 from service.settings import Settings
+from service.workflows import batches
 from tests.web.service import Service, running
 
 NDJSON = {"Content-Type": "application/x-ndjson"}
@@ -100,6 +101,40 @@ def test_a_full_queue_takes_all_of_a_batch_or_nothing(service: Service) -> None:
     assert service.http.get("/v1/batches").json()["items"] == []
     assert service.http.get("/v1/datasets").json()["items"] == []
     assert service.http.post("/v1/batches", json={"datasets": [dataset(i) for i in range(3)]}).status_code == 202
+
+
+def test_a_batch_sent_again_is_the_same_batch_though_the_queue_is_full(service: Service) -> None:
+    object.__setattr__(service.settings, "queue_depth", 2)
+    headers = {"Idempotency-Key": "b-2"}
+    body = {"datasets": [dataset(i) for i in range(2)]}
+    first, second = (service.http.post("/v1/batches", json=body, headers=headers) for _ in "12")
+    assert (first.status_code, second.status_code) == (202, 202)
+    assert first.json()["id"] == second.json()["id"]
+    body["datasets"].append(dataset(2))
+    other = service.http.post("/v1/batches", json=body, headers=headers)
+    assert (other.status_code, other.json()["code"]) == (422, "key_reused")
+    new = service.http.post("/v1/batches", json=body)
+    assert (new.status_code, new.json()["code"]) == (503, "queue_full")
+    assert "nothing was stored" in new.json()["detail"]
+    assert len(service.http.get("/v1/datasets").json()["items"]) == 2
+
+
+def test_a_queue_that_fills_meanwhile_says_what_was_stored(service: Service, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Between the first look and the jobs, others may take the room."""
+    object.__setattr__(service.settings, "queue_depth", 1)
+    whole = batches._keep_datasets
+
+    def meanwhile(*words: Any) -> list[str]:
+        ids = whole(*words)
+        assert service.http.post("/v1/jobs", json={"dataset": dataset(7)}).status_code == 202
+        return ids
+
+    monkeypatch.setattr(batches, "_keep_datasets", meanwhile)
+    late = service.http.post("/v1/batches", json={"datasets": [dataset(0)]})
+    assert (late.status_code, late.json()["code"]) == (503, "queue_full")
+    assert "the datasets were stored, no job was put in" in late.json()["detail"]
+    assert service.http.get("/v1/batches").json()["items"] == []
+    assert {one["subject"] for one in service.http.get("/v1/datasets").json()["items"]} == {"PT-0", "PT-7"}
 
 
 def resident() -> int:

@@ -351,7 +351,7 @@ def test_an_unexpected_error_has_the_security_headers_once(
         raise RuntimeError("made by a test")
 
     monkeypatch.setattr("service.web.routes.jobs.list_jobs", fall)
-    broken = open_service.http.get("/v1/jobs")
+    broken = open_service.http.get("/v1/jobs", headers={"Connection": "close"})  # as the server does after an error
     monkeypatch.undo()
     assert (broken.status_code, broken.json()["code"]) == (500, "internal_error")
     assert "made by a test" not in broken.text
