@@ -27,7 +27,8 @@ class FigureData:
 
     x, y, fitted, residual, leverage, studentised, cooks, weights: shape (n,), in the order measured; NaN where
     undefined; residual = y - fitted in the unit of y. `drawn`: indices of the points that are drawn, ascending.
-    `suspects`: points that a warning names. Plan and result are the documents that the API answers.
+    `suspects`: points that do not belong with the others; `swaying`: points that decide or move the curve alone, which
+    need not be suspect; both as warnings name them. Plan and result are the documents that the API answers.
     """
 
     subject: str
@@ -46,6 +47,7 @@ class FigureData:
     cooks: Floats
     drawn: Integers
     suspects: tuple[int, ...]
+    swaying: tuple[int, ...]
     plan: dict[str, Any]
     result: dict[str, Any]
 
@@ -156,7 +158,7 @@ def figure_data(content: DatasetContent, *, subject: str, plan: str, result: str
         columns["cooks"] = _floats(listed["cooks_distance"])
     else:
         columns = _columns(content, weights, asked, found)
-    suspects = _suspects(found)
+    suspects, swaying = _named(found, "suspect_point"), _named(found, "point_rules_fit")
     details = content.details
     return FigureData(
         subject=subject,
@@ -168,8 +170,9 @@ def figure_data(content: DatasetContent, *, subject: str, plan: str, result: str
         y=content.y,
         series=content.series,
         weights=weights,
-        drawn=_drawn(columns["residual"], suspects),
+        drawn=_drawn(columns["residual"], {*suspects, *swaying}),
         suspects=suspects,
+        swaying=swaying,
         plan=asked,
         result=found,
         **columns,
@@ -181,9 +184,9 @@ def _label(details: dict[str, Any], axis: str) -> str:
     return f"{quantity} ({unit})" if unit else str(quantity)
 
 
-def _suspects(found: dict[str, Any]) -> tuple[int, ...]:
-    named = [w["evidence"]["points"] for w in found["warnings"] if w["code"] in ("suspect_point", "point_rules_fit")]
-    return tuple(sorted({int(point) for points in named for point in points}))
+def _named(found: dict[str, Any], code: str) -> tuple[int, ...]:
+    lists = [one["evidence"]["points"] for one in found["warnings"] if one["code"] == code]
+    return tuple(sorted({int(point) for points in lists for point in points}))
 
 
 def _weights(content: DatasetContent, found: dict[str, Any]) -> Floats:
@@ -218,13 +221,13 @@ def _slope(curve: dict[str, Any], x: Floats) -> Floats:
     return np.asarray(chebyshev.chebval(to_t(x, (lo, hi)), slope))
 
 
-def _drawn(residual: Floats, suspects: tuple[int, ...]) -> Integers:
+def _drawn(residual: Floats, named: set[int]) -> Integers:
     n = residual.size
     if n <= MOST_DRAWN:
         return np.arange(n)
     largest = np.argsort(-np.abs(residual), kind="stable")[: MOST_DRAWN // 4]
-    even = np.linspace(0, n - 1, MOST_DRAWN - largest.size - len(suspects)).astype(np.intp)
-    return np.unique(np.concatenate([largest, even, np.array(suspects, dtype=np.intp)]))
+    even = np.linspace(0, n - 1, MOST_DRAWN - largest.size - len(named)).astype(np.intp)
+    return np.unique(np.concatenate([largest, even, np.array(sorted(named), dtype=np.intp)]))
 
 
 def _floats(values: list[float | None]) -> Floats:

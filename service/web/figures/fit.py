@@ -25,8 +25,8 @@ def curve(data: FigureData) -> Figure:
     below.axhline(0, color=ACCENT, linewidth=1.2, gid="zero", zorder=3)
     marks.points(above, data, data.x, data.y)
     marks.points(below, data, data.x, data.residual)
-    marks.suspects(above, data, data.x, data.y)
-    marks.suspects(below, data, data.x, data.residual)
+    marks.named(above, data, data.x, data.y)
+    marks.named(below, data, data.x, data.residual)
     below.set_xlim(above.get_xlim())
     above.tick_params(labelbottom=False)
     below.locator_params(axis="y", nbins=3)
@@ -46,7 +46,7 @@ def residuals(data: FigureData) -> Figure:
     for panel, across in ((above, data.x), (below, order)):
         panel.axhline(0, color=ACCENT, linewidth=1.2, gid="zero" if panel is above else "zero-by-order", zorder=3)
         marks.points(panel, data, across, data.residual)
-        marks.suspects(panel, data, across, data.residual)
+        marks.named(panel, data, across, data.residual)
         panel.locator_params(axis="y", nbins=4)
     below.locator_params(axis="x", integer=True)
     unit = f" ({data.y_unit})" if data.y_unit else ""

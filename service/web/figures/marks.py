@@ -1,4 +1,6 @@
-"""Points of a dataset on a panel: one shape a series, suspects ringed and numbered."""
+"""Points of a dataset on a panel: one shape a series; rings and squares around what warnings name, with its number."""
+
+from collections.abc import Sequence
 
 from matplotlib.axes import Axes
 
@@ -7,6 +9,7 @@ from service.web.figures.data import FigureData
 from service.web.figures.style import ALARM, COLOURS, MARKERS, MOST_IN_LEGEND, PANEL, shortened
 
 MOST_NUMBERED = 4
+MARKS = {"suspects": "suspect", "swaying": "sways the curve"}
 
 
 def series_names(data: FigureData) -> list[str]:
@@ -34,23 +37,36 @@ def points(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
         )
 
 
-def suspects(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
-    """Rings, with the number of the point counted from 1, as warnings name it."""
-    marked = list(data.suspects)
+def named(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
+    """Rings around suspects, squares around points that sway the curve, each with its number counted from 1."""
+    _around(panel, across, up, data.suspects, gid="suspects", marker="o", size=11)
+    _around(panel, across, up, data.swaying, gid="swaying", marker="s", size=13)
+    marked = sorted({*data.suspects, *data.swaying})
+    if marked:
+        _numbers(panel, across, up, marked)
+
+
+def _around(
+    panel: Axes, across: Floats, up: Floats, marked: Sequence[int], *, gid: str, marker: str, size: float
+) -> None:
     if not marked:
         return
     panel.plot(
-        across[marked],
-        up[marked],
+        across[list(marked)],
+        up[list(marked)],
         linestyle="none",
-        marker="o",
-        markersize=11,
+        marker=marker,
+        markersize=size,
         markerfacecolor="none",
         markeredgecolor=ALARM,
         markeredgewidth=1.5,
-        gid="suspects",
+        gid=gid,
+        label=MARKS[gid],
         zorder=5,
     )
+
+
+def _numbers(panel: Axes, across: Floats, up: Floats, marked: Sequence[int]) -> None:
     panel.margins(x=0.08, y=0.16)  # room for ring and number at the edges
     lo, hi = panel.get_xlim()
     for point in marked[:MOST_NUMBERED]:
@@ -58,7 +74,7 @@ def suspects(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
         panel.annotate(
             str(point + 1),
             (across[point], up[point]),
-            xytext=(-8 if right else 8, 3),
+            xytext=(-9 if right else 9, 3),
             textcoords="offset points",
             ha="right" if right else "left",
             color=ALARM,
@@ -69,10 +85,10 @@ def suspects(panel: Axes, data: FigureData, across: Floats, up: Floats) -> None:
 
 
 def legend(panel: Axes, data: FigureData, *lines: str) -> None:
-    """Below the panels: the named lines, and the series where there are several that can be told apart."""
+    """Below the panels: the named lines, the marks, and the series where there are several to be told apart."""
     names = series_names(data)
     drawn = {str(line.get_gid()): line for line in panel.get_lines()}
-    shown = [(drawn[gid], str(drawn[gid].get_label())) for gid in lines if gid in drawn]
+    shown = [(drawn[gid], str(drawn[gid].get_label())) for gid in (*lines, *MARKS) if gid in drawn]
     if len(names) > 1:
         some = names[:MOST_IN_LEGEND]
         shown += [(drawn[f"points-{number}"], shortened(name, 16)) for number, name in enumerate(some)]

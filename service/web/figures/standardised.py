@@ -46,7 +46,7 @@ def normal(data: FigureData) -> Figure:
     at[order] = expected
     value = np.where(np.isnan(data.studentised), np.nan, data.studentised)
     marks.points(panel, data, at, value)
-    marks.suspects(panel, data, at, value)
+    marks.named(panel, data, at, value)
     kind = "normal" if data.known_uncertainty else f"t quantile, {data.df - 1} df"
     name_axis(panel, x=f"expected ({kind})", y="studentised residual")
     marks.legend(panel, data)
@@ -63,7 +63,7 @@ def spread(data: FigureData) -> Figure:
         return figure
     panel.axhline(EXPECTED_ROOT, color=QUIET, linestyle=(0, (1.2, 1.6)), gid="even", label="even spread", zorder=2)
     marks.points(panel, data, data.fitted, root)
-    marks.suspects(panel, data, data.fitted, root)
+    marks.named(panel, data, data.fitted, root)
     across, up = group_means(data.fitted[known], root[known])
     panel.plot(across, up, color=LIMIT, linewidth=1.6, gid="group-means", label="mean of neighbours", zorder=3)
     panel.set_ylim(bottom=0)
@@ -85,8 +85,8 @@ def leverage(data: FigureData) -> Figure:
     marks.points(panel, data, data.leverage, value)
     largest = float(np.nanmax(np.abs(value)))
     right = min(1.0, 1.25 * float(data.leverage[known].max()))
-    marks.suspects(panel, data, data.leverage, value)
-    panel.set_xlim(0, right)
+    marks.named(panel, data, data.leverage, value)
+    panel.set_xlim(0, 1.04 * right)  # room for marks around a leverage of 1
     panel.set_ylim(-1.25 * max(largest, 2.0), 1.25 * max(largest, 2.0))
     h = np.linspace(right / 400, min(right, 0.999), 400)
     for number, distance in enumerate(COOK_CONTOURS):

@@ -24,7 +24,7 @@ def _curve(data: FigureData) -> str:
     return (
         f"{data.x.size} points of {data.y_label} against {data.x_label} from {lo:.6g} to {hi:.6g}, and the chosen curve"
         f" of degree {data.degree}.{band} Below, the residuals: the largest is {_largest(data)}."
-        f"{_suspects(data)}{_thinned(data)}"
+        f"{_marked(data)}{_thinned(data)}"
     )
 
 
@@ -46,7 +46,7 @@ def _residuals(data: FigureData) -> str:
     return (
         f"Residuals of degree {data.degree} against {data.x_label} and against the order measured. Their standard"
         f" deviation is {_number(data.result['curve']['residual_sd'])}{_unit(data)}; the largest is {_largest(data)}."
-        f"{_series(data)}{_suspects(data)}"
+        f"{_series(data)}{_marked(data)}"
     )
 
 
@@ -58,7 +58,7 @@ def _normal(data: FigureData) -> str:
         return "No studentised residual can be computed, so there is nothing to compare with normal quantiles."
     return (
         f"{known.size} studentised residuals from {known.min():.3g} to {known.max():.3g} against the quantiles expected"
-        f" of normal errors, with the band that holds 95 % of each.{test}{_suspects(data)}"
+        f" of normal errors, with the band that holds 95 % of each.{test}{_marked(data)}"
     )
 
 
@@ -79,7 +79,7 @@ def _leverage(data: FigureData) -> str:
     point = int(np.nanargmax(data.cooks))
     return (
         f"Studentised residual against leverage, which reaches {data.leverage.max():.3g}, with lines of Cook's distance"
-        f" 0.5 and 1. The largest Cook's distance is {data.cooks[point]:.3g}, of point {point + 1}.{_suspects(data)}"
+        f" 0.5 and 1. The largest Cook's distance is {data.cooks[point]:.3g}, of point {point + 1}.{_marked(data)}"
     )
 
 
@@ -122,11 +122,15 @@ def _thinned(data: FigureData) -> str:
     return f" Drawn are {data.drawn.size} of the points: those farthest from the curve, and an even choice of the rest."
 
 
-def _suspects(data: FigureData) -> str:
-    if not data.suspects:
+def _marked(data: FigureData) -> str:
+    return _list("Ringed as suspect", data.suspects) + _list("In a square, swaying the curve", data.swaying)
+
+
+def _list(why: str, points: tuple[int, ...]) -> str:
+    if not points:
         return ""
-    named = ", ".join(str(point + 1) for point in data.suspects[:10])
-    return f" Ringed: point{'s' if len(data.suspects) > 1 else ''} {named}."
+    named = ", ".join(str(point + 1) for point in points[:10])
+    return f" {why}: point{'s' if len(points) > 1 else ''} {named}{' and more' if len(points) > 10 else ''}."
 
 
 def _percent(data: FigureData) -> str:

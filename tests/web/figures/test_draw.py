@@ -64,7 +64,7 @@ def test_words_say_the_numbers():
     assert f"{result['candidates'][1]['cv']['rmse_mean']:.3g} at degree 2" in alt_text("degrees", data)
     assert f"{result['unseen_bend']['y']:.3g} mA" in alt_text("unseen", data)
     assert "maximum permissible error is 0.2 mA" in alt_text("unseen", data)
-    assert "Ringed: point 16" in alt_text("curve", data)
+    assert "Ringed as suspect: point 16." in alt_text("curve", data)
     assert "95 % coverage band" in alt_text("curve", data)
     assert "told apart by shape: up, down" in alt_text("residuals", data)
     assert f"p {result['diagnostics']['normality']['p']:.2g}" in alt_text("normal", data)

@@ -7,8 +7,12 @@ import pytest
 import statsmodels.api as sm
 from scipy import stats
 
+from service.core.plan import Plan
+from service.web.figures.draw import draw
 from service.web.figures.standardised import COOK_CONTOURS
-from tests.web.figures.made import bowed, drawing
+from service.web.figures.words import alt_text
+from tests.web.figures.made import bowed, drawing, figures_of
+from tests.web.figures.svg import Drawing
 
 HREF = "{http://www.w3.org/1999/xlink}href"
 NEAR = 2e-3  # of the axis: positions in the SVG have six decimals, tick labels three to four digits
@@ -71,7 +75,21 @@ def test_suspect_readings_are_ringed_and_numbered():
     data, figure = bowed(), drawing("curve")
     ring = _both(figure, "suspects", 0)
     near(ring, np.array([[data.x[15], data.y[15]]]), scale=100)
-    assert "16" in figure.texts()
+    assert {"16", "suspect"} <= set(figure.texts())
+    assert not figure.has("swaying")
+
+
+def test_a_point_that_only_sways_the_curve_is_in_a_square_and_not_called_suspect():
+    x = np.append(np.linspace(0.0, 10.0, 11), 100.0)
+    data = figures_of(x, 1 + 2 * x + 0.1 * np.cos(5 * x), plan=Plan(max_degree=2))
+    assert (data.suspects, data.swaying) == ((), (11,))
+    figure = Drawing(draw("curve", "svg", data))
+    square = _both(figure, "swaying", 0)
+    near(square, np.array([[x[11], data.y[11]]]), scale=200)
+    assert {"12", "sways the curve"} <= set(figure.texts())
+    assert not {"suspect"} & set(figure.texts())
+    assert "In a square, swaying the curve: point 12." in alt_text("curve", data)
+    assert "suspect" not in alt_text("leverage", data)
 
 
 def test_residuals_stand_against_x_and_against_order():
