@@ -21,13 +21,25 @@ def at(document: Any, pointer: str) -> Any:
     return value
 
 
-def number(document: Any, pointer: str, digits: int = 4) -> Markup:
-    """The number there, rounded for reading; a dash where it is null."""
+def number(document: Any, pointer: str, digits: int | None = 4) -> Markup:
+    """The number there, rounded for reading, or with all its digits; a word where it is null."""
     value = at(document, pointer)
     if value is None:
         return Markup('<span class="none" data-at="{}">{}</span>').format(pointer, "none")
     exact = json.dumps(value)
-    return Markup('<data value="{}" data-at="{}">{}</data>').format(exact, pointer, rounded(value, digits))
+    return Markup('<data value="{}" data-at="{}">{}</data>').format(exact, pointer, shown(value, digits))
+
+
+def shown(value: int | float, digits: int | None) -> str:
+    """Rounded to so many digits; None for a number that people take into their own programs."""
+    return unrounded(value) if digits is None else rounded(value, digits)
+
+
+def unrounded(value: int | float) -> str:
+    """The shortest text that reads back the same double, in the characters that programs read."""
+    mantissa, e, power = repr(value).partition("e")
+    mantissa = mantissa.removesuffix(".0")
+    return f"{mantissa}e{int(power)}" if e else mantissa
 
 
 def rounded(value: int | float, digits: int = 4) -> str:

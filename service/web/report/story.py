@@ -10,7 +10,7 @@ from reportlab.platypus import CondPageBreak, Image, KeepTogether, Paragraph, Sp
 from service.web.figures.names import TITLES, FigureName
 from service.web.pages import words
 from service.web.pages.gather import JobPage
-from service.web.pages.numbers import at, rounded
+from service.web.pages.numbers import at, rounded, shown
 from service.web.report import look
 
 GAP = 4 * mm
@@ -48,10 +48,10 @@ class Writer:
         """A paragraph; whatever came from callers is escaped."""
         return Paragraph(escape(words_), self.styles[style])
 
-    def number(self, pointer: str, digits: int = 4) -> str:
-        """A number of the API's document, rounded for reading."""
+    def number(self, pointer: str, digits: int | None = 4) -> str:
+        """A number of the API's document, rounded for reading; None: with all its digits."""
         value = at(self.page.job, pointer)
-        return "none" if value is None else rounded(value, digits)
+        return "none" if value is None else shown(value, digits)
 
     def unit(self, axis: str) -> str:
         """The unit, with a space before it."""
@@ -132,17 +132,18 @@ class Writer:
     def _curve(self) -> Story:
         power = at(self.page.job, "/result/curve/power/coefficients")
         rows = [
-            [str(k), self.number(f"{where}/coefficients/{k}", 12)]
+            [str(k), self.number(f"{where}/coefficients/{k}", None)]
             + [self.number(f"{where}/{column}/{k}", digits) for column, digits in COLUMNS]
-            + [self.number(f"/result/curve/coefficients/{k}", 12)]
+            + [self.number(f"/result/curve/coefficients/{k}", None)]
             for where in ("/result/curve/power",)
             for k in range(len(power))
         ]
         head = ["Power of x", "Coefficient", "Standard error", "t", "p", "Chebyshev coefficient"]
-        lo, hi = self.number("/result/working_range/0", 7), self.number("/result/working_range/1", 7)
+        lo, hi = (self.number(f"/result/working_range/{end}", None) for end in (0, 1))
         said = (
             f"Valid for x from {lo} to {hi}{self.unit('x')} only. Chebyshev basis over"
-            f" {self.number('/result/curve/domain/0', 7)} to {self.number('/result/curve/domain/1', 7)}."
+            f" a = {self.number('/result/curve/domain/0', None)} to b = {self.number('/result/curve/domain/1', None)}:"
+            f" {words.CHEBYSHEV}"
             f" Residual SD {self.number('/result/curve/residual_sd')}{self.unit('y')},"
             f" {self.number('/result/curve/degrees_of_freedom')} degrees of freedom,"
             f" R-squared {self.number('/result/curve/r2', 9)}. Weights: {self.page.job['result']['weights']['used']}."

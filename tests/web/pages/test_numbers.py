@@ -1,10 +1,12 @@
 """Every number on a page is the API's: exact in its value, rounded in its text."""
 
+from fractions import Fraction
 from typing import Any
 
+import numpy as np
 import pytest
 
-from service.web.pages.numbers import number, rounded, seconds
+from service.web.pages.numbers import number, rounded, seconds, unrounded
 from tests.web.examples import BOWED, DATASET, PLAN
 from tests.web.pages.reading import holds, numbers
 from tests.web.service import Service
@@ -92,6 +94,32 @@ def test_a_number_keeps_all_its_digits():
     made = str(number({"a/b": [0.1 + 0.2]}, "/a~1b/0", 3))
     assert made == '<data value="0.30000000000000004" data-at="/a~1b/0">0.3</data>'
     assert "none" in str(number({"p": None}, "/p"))
+
+
+@pytest.mark.parametrize("value", [0.1 + 0.2, -1.5, 19998390960815.906, 2.0, 1e22, -3.356643356643326e-06, 5e-324, 12])
+def test_an_unrounded_number_reads_back_the_same_and_is_short(value: float):
+    assert float(unrounded(value)) == value
+    assert len(unrounded(value)) <= len(repr(value))
+
+
+def test_printed_coefficients_compute_the_curve_where_x_lies_far_from_0(service: Service):
+    """Rounded to 12 digits those of the power form were off by 5 here, and the readings scatter by 0.007."""
+    x = 1e8 + np.linspace(0, 100, 21)
+    y = 5 + 0.3 * (x - 1e8) + 0.002 * (x - 1e8) ** 2 + np.random.default_rng(1).normal(0, 0.013, 21)
+    job = service.http.post("/v1/jobs", json={"dataset": {"subject": "far", "x": x.tolist(), "y": y.tolist()}}).json()
+    service.work()
+    fitted = service.http.get(f"/v1/jobs/{job['id']}").json()["result"]["diagnostics"]["points"]["fitted"]
+    for address in (f"/job/{job['id']}", f"/job/{job['id']}/report"):
+        read = {pointer: text for pointer, _, text in numbers(service.http.get(address).text)}
+        power, chebyshev = (
+            [float(read[f"/result/curve/{name}/{k}"]) for k in range(3)]
+            for name in ("power/coefficients", "coefficients")
+        )
+        exactly = [float(sum(Fraction(c) * Fraction(at) ** k for k, c in enumerate(power))) for at in x]
+        np.testing.assert_allclose(exactly, fitted, rtol=0, atol=0.005)
+        a, b = (float(read[f"/result/curve/domain/{end}"]) for end in (0, 1))
+        t = (2 * x - a - b) / (b - a)
+        np.testing.assert_allclose(np.polynomial.chebyshev.chebval(t, chebyshev), fitted, rtol=0, atol=1e-9)
 
 
 @pytest.mark.parametrize(
