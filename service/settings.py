@@ -3,7 +3,9 @@
 Every field is also an environment variable with the prefix LEASTBEND_ (LEASTBEND_DATA_DIR, LEASTBEND_PORT, ...).
 """
 
+import binascii
 import json
+from base64 import b64decode
 from collections.abc import Mapping
 from pathlib import Path
 
@@ -61,6 +63,16 @@ class Settings(BaseSettings):
     def _is_postgres(cls, value: str | None) -> str | None:
         if value is not None and not value.startswith("postgresql+psycopg://"):
             raise ValueError("must start with postgresql+psycopg:// (leave it out for SQLite)")
+        return value
+
+    @field_validator("notify_secret")
+    @classmethod
+    def _is_base64(cls, value: str | None) -> str | None:
+        if value is not None:
+            try:
+                b64decode(value.removeprefix("whsec_") + "==")  # padding may be left out, and too much is none
+            except binascii.Error as error:
+                raise ValueError(f"must be whsec_ and the base64 of 24 bytes or more: {error}") from error
         return value
 
     @field_validator("sweep_seconds")

@@ -93,6 +93,8 @@ class Notifier(threading.Thread):
                     pass
             except (LeastbendError, SQLAlchemyError) as error:
                 logger.warning("notifications wait: %s", error)
+            except Exception:
+                logger.exception("notifications wait")  # a thread that ended would be missed by nobody
 
 
 def start_notifiers(settings: Settings) -> None:

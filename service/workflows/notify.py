@@ -6,6 +6,7 @@ webhook-signature. Any 2xx answer is a receipt; otherwise it is sent again, with
 """
 
 import json
+import logging
 import re
 import socket
 from collections.abc import Callable
@@ -32,6 +33,14 @@ LOCAL_NAMES = ("localhost", "ip6-localhost")
 # Labels of 1 to 63 characters (RFC 1035), or an IPv6 address: what a resolver can be asked for.
 NAME = re.compile(r"(?=.{1,253}$)[\w-]{1,63}(\.[\w-]{1,63})*\.?|[0-9A-Fa-f:.]+")
 NAT64 = IPv6Network("64:ff9b::/96")
+# What Python 3.11 counts as global and leads nowhere public, whichever IPv4 address it holds: IPv4-compatible and
+# IPv4-translated addresses (RFC 4291, 2765), local NAT64 (RFC 8215), site-local (RFC 3879), segment routing (RFC 9602),
+# documentation (RFC 9637).
+NOT_PUBLIC = tuple(
+    IPv6Network(one) for one in ("::/96", "::ffff:0:0:0/96", "64:ff9b:1::/48", "fec0::/10", "5f00::/16", "3fff::/20")
+)
+
+logger = logging.getLogger(__name__)
 
 
 class Refused(Exception):
@@ -76,6 +85,8 @@ def is_private(host: str) -> bool:
             address = IPv4Address(socket.inet_aton(name))  # 127.1, 0x7f000001, 2130706433: systems take these, too
         except OSError:
             return False
+    if any(address in network for network in NOT_PUBLIC):
+        return True
     return any(not one.is_global or one.is_multicast for one in (address, *_within(address)))
 
 
@@ -101,7 +112,7 @@ def send_due(database: Database, settings: Settings, sender: Sender, *, clock: C
         if due is None:
             continue
         tried += 1
-        state, answer = _send(settings, sender, due, now)
+        state, answer = _try(settings, sender, due, now)
         next_at = None
         if state == "waiting":
             if due.attempts > len(PAUSES):
@@ -111,6 +122,15 @@ def send_due(database: Database, settings: Settings, sender: Sender, *, clock: C
         with database.write() as connection:
             notifications.settle(connection, job_id, state=state, answer=answer, next_at=next_at, now=now)
     return tried
+
+
+def _try(settings: Settings, sender: Sender, due: Due, now: datetime) -> tuple[str, str]:
+    """State and answer. What goes wrong with one, whatever it is, must not hold up the others: it is tried again."""
+    try:
+        return _send(settings, sender, due, now)
+    except Exception as error:
+        logger.exception("the notification of job %s could not be sent", due.job_id)
+        return "waiting", f"could not be sent: {type(error).__name__}"
 
 
 def _send(settings: Settings, sender: Sender, due: Due, now: datetime) -> tuple[str, str]:

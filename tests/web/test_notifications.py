@@ -20,7 +20,7 @@ from standardwebhooks.webhooks import Webhook, WebhookVerificationError
 from service.client import Client
 from service.settings import Settings
 from service.store.records import NotificationRecord
-from service.worker.notifier import Poster
+from service.worker.notifier import Notifier, Poster
 from service.workflows.callers import LOCAL, create_key
 from service.workflows.cancel import cancel_job
 from service.workflows.notify import PAUSES, TAKEN_FOR, send_due
@@ -108,6 +108,47 @@ def test_it_is_sent_again_with_longer_pauses_until_it_is_received(desk: Desk) ->
         for _, headers, body in receiver.got:  # each attempt has a timestamp and a signature of its own
             Webhook(told.secret).verify(body, headers)
         assert len({headers["webhook-timestamp"] for _, headers, _ in receiver.got}) == 4
+
+
+def test_one_that_cannot_be_sent_at_all_is_tried_again_and_holds_up_nobody(desk: Desk) -> None:
+    told = Notified(desk, "http://hooks.example/")
+    other = Desk(desk.database, desk.transport, told.settings).submit(
+        Submission(dataset=calibration(2), notify_url="http://other.example/")
+    )
+    told.end()
+    cancel_job(desk.database, other, by="anna", now=told.start)
+    sent = list[str]()
+
+    def sender(url: str, _body: bytes, _headers: dict[str, str]) -> int:
+        sent.append(url)
+        if "hooks" in url:
+            raise ZeroDivisionError
+        return 204
+
+    told.poster = sender
+    assert told.send() == 2
+    assert sorted(sent) == ["http://hooks.example/", "http://other.example/"]
+    assert (told.state.state, told.state.last_answer) == ("waiting", "could not be sent: ZeroDivisionError")
+    assert told.state.next_at == told.start + PAUSES[0]
+    assert told.send(PAUSES[0].total_seconds()) == 1
+
+
+def test_a_thread_that_sends_outlives_any_error(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    notifier = Notifier(Settings(data_dir=tmp_path))
+    looks = list[int]()
+
+    def look(*_: object, **__: object) -> int:
+        looks.append(len(looks))
+        if len(looks) == 3:
+            notifier._pause.set()
+            return 0
+        raise ZeroDivisionError
+
+    monkeypatch.setattr("service.worker.notifier.send_due", look)
+    monkeypatch.setattr("service.worker.notifier.LOOK_SECONDS", 0.001)
+    notifier.start()
+    notifier.join(timeout=30)
+    assert looks == [0, 1, 2]
 
 
 def test_it_is_given_up_after_the_last_pause(desk: Desk) -> None:

@@ -1,6 +1,8 @@
 """Which addresses are called with a notification, and which never: as posted, and as a name turns out to mean."""
 
 import pytest
+from pydantic import ValidationError
+from standardwebhooks.webhooks import Webhook
 
 from service.errors import InvalidInput
 from service.settings import Settings
@@ -49,6 +51,15 @@ PRIVATE = [
     "64:ff9b::7f00:1",
     "64:ff9b::a9fe:a9fe",
     "2001:0:7f00:1::",
+    "::8.8.8.8",
+    "::10.0.0.1",
+    "::ffff:0:808:808",
+    "64:ff9b:1::1",
+    "64:ff9b:1:a00:1::",
+    "fec0::1",
+    "feff::1",
+    "3fff::1",
+    "5f00::1",
 ]
 
 
@@ -124,6 +135,15 @@ def test_a_name_that_cannot_be_asked_for_is_given_up(host: str) -> None:
     """The system's resolver raises UnicodeError for these, which must not end the thread that sends."""
     with pytest.raises((Refused, OSError)):
         Poster(allow_private=False)(f"http://{host}.example/", b"{}", {})
+
+
+@pytest.mark.parametrize("letters", [33, 37, 41])
+def test_a_secret_that_is_no_base64_is_refused_at_the_start(letters: int) -> None:
+    """One letter more than whole bytes: the pattern holds, but nothing can be signed with it."""
+    with pytest.raises(ValidationError, match="notify_secret[^$]*must be whsec_ and the base64"):
+        Settings(notify_secret="whsec_" + "A" * letters)
+    for good in (letters - 1, letters + 1, letters + 2):
+        assert Webhook(Settings(notify_secret="whsec_" + "A" * good).notify_secret or "")
 
 
 def test_without_keys_a_secret_must_be_set() -> None:
