@@ -16,7 +16,7 @@ def copy_sqlite(source: Path, destination: Path) -> None:
     os.close(os.open(unfinished, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o600))  # it holds measurements
     try:
         with (
-            closing(sqlite3.connect(f"file:{source}?mode=ro", uri=True)) as old,
+            closing(sqlite3.connect(f"{source.as_uri()}?mode=ro", uri=True)) as old,
             closing(sqlite3.connect(unfinished)) as new,
         ):
             old.backup(new)

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, create_engine, event, make_url
+from sqlalchemy import URL, Connection, Engine, create_engine, event, make_url
 from sqlalchemy.exc import DBAPIError
 from sqlalchemy.exc import TimeoutError as PoolTimeout
 
@@ -134,7 +134,7 @@ def _lock(path: Path) -> WriteLock:
 
 def _sqlite(path: Path, *, begin: str, synchronous: str, connections: int) -> Engine:
     engine = create_engine(
-        f"sqlite:///{path}",
+        URL.create("sqlite", database=str(path)),  # not as text, in which ? and % of a path would mean something else
         pool_size=connections,
         max_overflow=0,
         pool_timeout=BUSY_SECONDS,

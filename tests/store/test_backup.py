@@ -56,6 +56,22 @@ def test_a_backup_taken_while_jobs_come_and_go_is_whole(tmp_path: Path) -> None:
     database.close()
 
 
+@pytest.mark.parametrize("name", ["a#b", "a?mode=memory", "a%41", "a b&c=d", "\u00e4;'\""])
+def test_a_directory_of_any_name(tmp_path: Path, name: str) -> None:
+    """`#`, `?` and `%` mean something in an address: a copy of another, empty database was called a success."""
+    settings = Settings(data_dir=tmp_path / name, database_url=None)
+    database, transport = open_database(settings, durable=True), open_transport(settings)
+    migrate(database)
+    job_id = Desk(database, transport, settings).put()
+    transport.close()
+    database.close()
+    assert [path.name for path in tmp_path.iterdir()] == [name]
+    assert {path.name for path in (tmp_path / name).iterdir()} >= {FILE_NAME, "queue.db"}
+    made = back_up(settings, tmp_path / name / "copy.db")
+    with closing(sqlite3.connect(made.path)) as copy:
+        assert copy.execute("SELECT id FROM jobs").fetchall() == [(job_id,)]
+
+
 def test_a_backup_never_overwrites(tmp_path: Path) -> None:
     settings = Settings(data_dir=tmp_path / "data", database_url=None)
     database = open_database(settings, durable=True)
