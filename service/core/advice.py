@@ -35,7 +35,9 @@ def settle_bend(found: Findings, limit: BendLimit) -> list[Advice]:
             times = added.size // found.observations.levels
             what = f"Repeat every level {times} more time{'s' if times > 1 else ''} ({added.size} readings)"
         elif action == "repeat_end_levels":
-            what = f"Repeat the lowest and highest level {added.size // 2} more times each ({added.size} readings)"
+            times = added.size // 2
+            each = "once more" if times == 1 else f"{times} more times"
+            what = f"Repeat the lowest and the highest level {each} ({added.size} readings)"
         else:
             places = ", ".join(f"{v:.6g}" for v in added)
             what = f"Add one reading at each of {added.size} new levels: x = {places}"
@@ -65,6 +67,20 @@ def settle_spare_points(found: Findings) -> Advice:
             f"Add one reading at each of {missing} new levels, x = {places}: then two levels and three points are "
             f"spare at degree {found.degree}, enough to judge the fit by."
         ),
+    )
+
+
+def settle_range(found: Findings) -> Advice:
+    """Levels at those ends of the working range asked for that the points do not reach."""
+    asked, (lo, hi) = found.plan.working_range or found.full.domain, found.full.domain
+    ends = [end for end, beyond in ((asked[0], asked[0] < lo), (asked[1], asked[1] > hi)) if beyond]
+    places = " and ".join(f"{end:.6g}" for end in ends)
+    return Advice(
+        action="add_levels",
+        added_readings=len(ends),
+        at_x=tuple(ends),
+        unseen_bend_expected=None,
+        message=f"Add a level at x = {places}, and levels between there and the points, or ask for the range measured.",
     )
 
 
@@ -103,7 +119,7 @@ def _expected_ratio(found: Findings, limit: BendLimit, added: Floats) -> float |
     terms = range(degree + 1, min(degree + TERMS, design.top) + 1)
     if not terms:
         return None
-    absolute, confidence = found.plan.known_uncertainty, found.plan.confidence
+    absolute, confidence = found.plan.known_uncertainty, found.plan.bend_confidence
     sigma = 1.0 if absolute else float(np.sqrt(fits.rss[degree] / max(1, fits.df(degree))))
     bounds = [
         sigma * (MEAN_OF_HALF_NORMAL + (z_quantile(confidence) if absolute else t_quantile(confidence, design.df(j))))

@@ -95,7 +95,7 @@ def analyse(observations: Observations, plan: Plan, *, progress: Progress | None
         cooks=cooks,
         lack_of_fit=lack_of_fit(observations, full),
         unseen=unseen_bend(
-            full, degree, working_range, least_slope=least_slope, absolute=known, confidence=plan.confidence
+            full, degree, working_range, least_slope=least_slope, absolute=known, confidence=plan.bend_confidence
         ),
         gap_ratios=ratios,
     )

@@ -10,6 +10,7 @@ from service.core.curve import derivative, to_t
 from service.core.findings import Findings
 from service.core.nested import NestedFits
 from service.core.observations import Floats
+from service.core.plan import MaxPermissibleError
 from service.core.requirements import allowed_error
 
 
@@ -45,9 +46,11 @@ def bend_limits(found: Findings) -> list[BendLimit]:
     limits: list[BendLimit] = []
     if mpe is not None and (mpe.of == "y" or found.monotonic):
         pointwise = mpe.kind == "percent_of_value"
-        x = found.observations.level_x if pointwise else grid
+        x = np.union1d(grid, found.observations.level_x) if pointwise else grid
         x = x[(x >= found.working_range[0]) & (x <= found.working_range[1])]
         allowed = allowed_error(mpe, found, x)
+        if pointwise:
+            x, allowed = _where_a_share_is_asked(found, mpe, x, allowed)
         if mpe.of == "x":
             slopes = np.full(x.shape, found.least_slope or 0.0)
             if pointwise:
@@ -63,3 +66,15 @@ def bend_limits(found: Findings) -> list[BendLimit]:
         allowed = np.full(grid.shape, asked.max_unseen_bend)
         limits.append(BendLimit(x=grid, allowed=allowed, pointwise=False, words="the plan's max_unseen_bend"))
     return limits
+
+
+def _where_a_share_is_asked(
+    found: Findings, mpe: MaxPermissibleError, x: Floats, allowed: Floats
+) -> tuple[Floats, Floats]:
+    """Without the neighbourhood of 0, where a share of the value allows nothing: below what any level is allowed."""
+    at_levels = allowed_error(mpe, found, found.observations.level_x)
+    at_levels = at_levels[at_levels > 0]
+    if at_levels.size == 0:
+        return x, allowed
+    keep = allowed >= at_levels.min()
+    return x[keep], allowed[keep]

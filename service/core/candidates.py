@@ -36,6 +36,8 @@ def describe_candidates(
         first = 0 if fits.intercept else 1
         rss[first : first + len(exact.rss_below)] = exact.rss_below
     tss = float(rss[0]) if fits.intercept else fits.tss
+    if exact is None and tss <= fits.rounding_rss:
+        tss = 0.0  # y is constant but for rounding
     loo = leave_one_out_errors(fits)
     cvs = _cross_validations(held, tss)
     largest = np.abs(fits.residuals / np.sqrt(fits.weights)[:, None]).max(axis=0)

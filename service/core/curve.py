@@ -15,6 +15,7 @@ from service.core.result import Curve, PowerBasis, Test
 from service.core.tails import f_tail, t_two_sided, z_two_sided
 
 DIGITS_OF_A_DOUBLE = 15
+BEYOND_A_DOUBLE = "; null where no double can hold the value: use the Chebyshev coefficients"
 
 
 def describe_curve(
@@ -36,10 +37,13 @@ def describe_curve(
         covariance = tuple(tuple(row) for row in (fits.unscaled_covariance(degree) * variance).tolist())
     if exact:
         power = _exact_power(exact, rss, df, absolute)
+        if absolute and rss == 0:  # no residual to scale back from: known uncertainty stands all the same
+            doubles = _rounded_power(fits, degree, variance, df, absolute)
+            power = replace(power, standard_errors=doubles.standard_errors, t=doubles.t, p=doubles.p)
     else:
         power = _rounded_power(fits, degree, variance, df, absolute)
     tss = fits.tss if fits.intercept else float(np.sum(fits.weights * fits.y**2))
-    r2 = exact.r2 if exact else (1 - rss / tss if tss > 0 else None)
+    r2 = exact.r2 if exact else (1 - rss / tss if tss > fits.rounding_rss else None)
     curve = Curve(
         basis="chebyshev",
         domain=fits.domain,
@@ -79,8 +83,7 @@ def _exact_power(exact: ExactFit, rss: float, df: int, absolute: bool) -> PowerB
         t=t,
         p=tuple(None if v is None else float(z_two_sided(v) if absolute else t_two_sided(v, df)) for v in t),
         digits=DIGITS_OF_A_DOUBLE if representable else 0,
-        method="exact integer arithmetic, each coefficient rounded once"
-        + ("" if representable else "; null where no double can hold the value: use the Chebyshev coefficients"),
+        method="exact integer arithmetic, each coefficient rounded once" + ("" if representable else BEYOND_A_DOUBLE),
     )
 
 
@@ -89,25 +92,42 @@ def _rounded_power(fits: NestedFits, degree: int, variance: float | None, df: in
     matrix = _power_matrix(fits.domain, degree)
     c = [Fraction(v) for v in fits.chebyshev(degree).tolist()]
     exact_values = [sum((a * b for a, b in zip(row, c, strict=True)), Fraction(0)) for row in matrix]
-    size = np.array([[abs(float(a)) for a in row] for row in matrix])
-    m = np.array([[float(a) for a in row] for row in matrix])
+    m = np.array([[_double(a) for a in row] for row in matrix])
     unit = fits.unscaled_covariance(degree)
     root_w_y = float(np.sqrt(np.sum(fits.weights * fits.y**2)))
-    error = size @ np.sqrt(np.diag(unit)) * (4 * EPS * root_w_y)
-    digits = DIGITS_OF_A_DOUBLE
-    for value, off in zip(exact_values, error, strict=True):
-        if value != 0 and off > 0:
-            digits = min(digits, math.floor(-math.log10(min(1.0, off / abs(float(value))))))
-    se = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", m, unit, m), 0) * (variance or 0.0))
-    t = [float(v) / s if s > 0 else None for v, s in zip(exact_values, se.tolist(), strict=True)]
+    coefficients = [_double(v) for v in exact_values]
+    with np.errstate(over="ignore", invalid="ignore"):
+        error = np.abs(m) @ np.sqrt(np.diag(unit)) * (4 * EPS * root_w_y)
+        se = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", m, unit, m), 0) * (variance or 0.0)).tolist()
+    representable = all(
+        math.isfinite(c) and (c != 0 or v == 0) for c, v in zip(coefficients, exact_values, strict=True)
+    )
+    digits = DIGITS_OF_A_DOUBLE if representable else 0
+    for value, off in zip(coefficients, error.tolist(), strict=True):
+        if representable and value != 0 and off > 0:
+            digits = min(digits, math.floor(-math.log10(min(1.0, off / abs(value)))))
+    usable = [0 < s < math.inf and math.isfinite(c) for c, s in zip(coefficients, se, strict=True)]
+    t = [c / s if ok else None for c, s, ok in zip(coefficients, se, usable, strict=True)]
     return PowerBasis(
-        coefficients=tuple(float(v) for v in exact_values),
-        standard_errors=tuple(s if variance is not None and s > 0 else None for s in se.tolist()),
+        coefficients=tuple(
+            c if math.isfinite(c) and (c != 0 or v == 0) else None
+            for c, v in zip(coefficients, exact_values, strict=True)
+        ),
+        standard_errors=tuple(s if ok else None for s, ok in zip(se, usable, strict=True)),
         t=tuple(t),
         p=tuple(None if v is None else float(z_two_sided(v) if absolute else t_two_sided(v, df)) for v in t),
         digits=digits,
-        method="Chebyshev QR, converted exactly; digits estimated from its error bound",
+        method="Chebyshev QR, converted exactly; digits estimated from its error bound"
+        + ("" if representable else BEYOND_A_DOUBLE),
     )
+
+
+def _double(value: Fraction) -> float:
+    """The nearest double; infinite where there is none."""
+    try:
+        return float(value)
+    except OverflowError:
+        return math.inf if value > 0 else -math.inf
 
 
 def _power_matrix(domain: tuple[float, float], degree: int) -> list[list[Fraction]]:

@@ -14,6 +14,8 @@ from service.core.result import Curve, Diagnostics, Test
 from service.core.unseen import Unseen
 from service.core.weighting import Weighted
 
+NO_DEPENDENCE = 0.05  # p of the whole curve, above which nothing shows that y depends on x
+
 
 @dataclass(frozen=True, kw_only=True, eq=False, slots=True)
 class Findings:
@@ -58,6 +60,21 @@ class Findings:
     def least_slope(self) -> float | None:
         """Smallest |dy/dx| in the working range; None where the curve is not monotonic."""
         return min(abs(self.slope[0]), abs(self.slope[1])) if self.monotonic else None
+
+    @property
+    def no_dependence(self) -> bool:
+        """Whether the curve explains no more than chance: then y may not depend on x at all."""
+        p, spare = self.curve.f.p, self.curve.degrees_of_freedom
+        return self.degree > 0 and spare >= 2 and p is not None and p > NO_DEPENDENCE
+
+    @property
+    def uncovered(self) -> float:
+        """How far the working range asked for goes beyond the points, as a share of it."""
+        asked = self.plan.working_range
+        if asked is None:
+            return 0.0
+        lo, hi = self.full.domain
+        return max(lo - asked[0], asked[1] - hi, 0.0) / (asked[1] - asked[0])
 
     @property
     def in_range(self) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:

@@ -10,6 +10,7 @@ Rule = Literal["least_bend", "lowest_cv", "one_standard_error", "aicc", "bic"]
 Scheme = Literal["k_fold", "leave_one_out", "leave_level_out", "leave_series_out"]
 RULES: tuple[Rule, ...] = ("least_bend", "lowest_cv", "one_standard_error", "aicc", "bic")
 HIGHEST_DEGREE = 12
+LEAST_BEND_CONFIDENCE = 0.95
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -73,7 +74,7 @@ class Plan:
 
     `working_range` is in the unit of x and defaults to the range of the data. `known_uncertainty`
     takes the dataset's u_y as absolute: terms are then judged by z-tests, not by F-tests. `confidence` is that of
-    the bounds on terms too small to show, and of coverage intervals.
+    coverage intervals and of the bounds on terms too small to show, which are never less sure than 95 %.
     """
 
     min_degree: int = 1
@@ -86,6 +87,11 @@ class Plan:
     confidence: float = 0.95
     known_uncertainty: bool = False
     requirements: Requirements = field(default_factory=Requirements)
+
+    @property
+    def bend_confidence(self) -> float:
+        """Of the unseen bend: what is asked for, and 95 % at least, so that asking for less cannot hide a bend."""
+        return max(LEAST_BEND_CONFIDENCE, self.confidence)
 
     def __post_init__(self) -> None:
         """Check what one field alone cannot show; raises InvalidInput naming each field."""

@@ -72,14 +72,18 @@ def _plain(
 def _monotonic(found: Findings) -> RequirementAnswer:
     least, greatest, at = found.slope
     word = "rises" if greatest > 0 else "falls"
-    message = (
-        f"The curve {word} throughout the working range."
-        if found.monotonic
-        else (
-            f"The curve turns or is flat within the working range (slope {least:.4g} to {greatest:.4g}), so one "
+    lo, hi = found.working_range
+    met: bool | None = found.monotonic
+    if found.monotonic and found.no_dependence:
+        met = None
+        message = "The readings do not show whether the curve rises or falls: its slope may as well be 0."
+    elif found.monotonic:
+        message = f"The curve {word} throughout, from {lo:g} to {hi:g}."
+    else:
+        message = (
+            f"The curve turns or is flat between {lo:g} and {hi:g} (slope {least:.4g} to {greatest:.4g}), so one "
             "reading can mean more than one value."
         )
-    )
     return RequirementAnswer(
         requirement="monotonic",
         asked={"value": True},
@@ -87,7 +91,7 @@ def _monotonic(found: Findings) -> RequirementAnswer:
         unit="none",
         worst_point=None,
         worst_x=at,
-        met=found.monotonic,
+        met=met,
         message=message,
     )
 
@@ -157,6 +161,9 @@ def _permissible_error(found: Findings, asked: MaxPermissibleError) -> Requireme
         f"The largest error of a calibration point is {largest:.4g} {what} (point {worst + 1}, x = {o.x[worst]:g}); "
         f"{asked.value:g} is allowed."
     )
+    if left_out := int(np.isnan(allowed[found.in_range]).sum()):
+        points = "1 point has" if left_out == 1 else f"{left_out} points have"
+        message += f" {points} no value to take a percentage of, and {'is' if left_out == 1 else 'are'} not judged."
     return _answer(name, asdict(asked), largest, unit, worst, float(o.x[worst]), met, message)
 
 
@@ -185,6 +192,8 @@ def _back_calculated(found: Findings, asked: BackCalculated) -> RequirementAnswe
         f"{share:.1%} of the points come back within their limit ({asked.limit_percent:g} %, lowest level "
         f"{wider:g} %); {asked.min_share:.1%} are asked for. Worst: point {worst + 1}, {shown}."
     )
+    if left_out := int((found.in_range & (o.x == 0)).sum()):
+        message += f" Blanks (x = 0): {left_out}, not judged."
     met = share >= asked.min_share
     return _answer(name, asdict(asked), share, "share", worst, float(o.x[worst]), met, message)
 

@@ -17,6 +17,8 @@ from service.core.tails import chi2_tail, f_tail
 
 # the test itself: the axis and NaN handling around it costs more than it does
 _shapiro = inspect.unwrap(stats.shapiro)
+LEAST_SPARE_FOR_SLOPES = 3
+LEAST_SPARE_FOR_NORMALITY = 3  # with fewer, residuals have the shape that the points give them, whatever the errors
 SHAPIRO_MOST = 5000  # Royston's approximation is made for n up to 5000
 
 
@@ -38,7 +40,9 @@ def breusch_pagan(fits: NestedFits, degree: int) -> Statistic:
     if fits.intercept and bool((fits.weights == fits.weights[0]).all()):
         q = fits.q[:, : degree + 1]
     else:
-        q = reduced_qr(basis(fits.x, fits.domain, degree, True))[0]
+        # without intercept a degree may equal the number of levels, and the last columns add nothing
+        columns = min(degree, np.unique(fits.x).size - 1) + 1
+        q = reduced_qr(basis(fits.x, fits.domain, columns - 1, True))[0]
     e = fits.residuals[:, degree]
     squares = (e / np.abs(e).max()) ** 2  # relative: their squares must stay within the range of a double
     off = squares - squares.mean()
@@ -47,7 +51,8 @@ def breusch_pagan(fits: NestedFits, degree: int) -> Statistic:
         return Statistic(statistic=0.0, df=(degree,), p=1.0, method=method)
     fitted = q.T @ off
     lm = fits.n * min(1.0, float(fitted @ fitted) / total)
-    return Statistic(statistic=lm, df=(degree,), p=float(chi2_tail(lm, degree)), method=method)
+    df = q.shape[1] - 1
+    return Statistic(statistic=lm, df=(df,), p=float(chi2_tail(lm, df)), method=method)
 
 
 def serial_correlation(fits: NestedFits, degree: int, order: Integers | None) -> Statistic:
@@ -102,27 +107,44 @@ def reset(fits: NestedFits, degree: int) -> Statistic:
     spread = float(fitted.std())
     if spread == 0:
         return Statistic(statistic=None, df=None, p=None, method=method, reason="constant fitted values")
-    f = (fitted - fitted.mean()) / spread
+    # where the curve has a constant, centring changes nothing but the rounding
+    f = (fitted - fitted.mean()) / spread if fits.intercept else fitted / spread
     squared = f * f
     extra = np.stack((squared * root_w, squared * f * root_w), axis=1)
     return _added_columns(fits, degree, extra, method)
 
 
 def series_difference(observations: Observations, fits: NestedFits, degree: int) -> Statistic:
-    """F-test of an offset of each series from the common curve (analysis of covariance)."""
-    method = "F-test of one offset per series (analysis of covariance; Draper & Smith 1998, ch. 14)"
+    """F-test of an offset and a slope of each series from the common curve (analysis of covariance).
+
+    Of offsets alone where the data cannot tell slopes, or leave too few points for both.
+    """
+    source = "(analysis of covariance; Draper & Smith 1998, ch. 14)"
+    method = f"F-test of one offset per series {source}"
     labels = observations.series
     reason = exact_reason(fits, degree)
     names = list(dict.fromkeys(labels or ()))
     if len(names) < 2:
         reason = "the dataset does not name two series or more"
-    elif fits.df(degree) - (len(names) - 1) < 1:
+    # beside a constant one series is the reference of the others; a curve through 0 has none
+    compared = names[1:] if fits.intercept else names
+    if reason is None and fits.df(degree) - len(compared) < 1:
         reason = "too few spare points"
     if reason:
         return Statistic(statistic=None, df=None, p=None, method=method, reason=reason)
     of = np.array(labels)
-    extra = np.column_stack([(of == name).astype(np.float64) for name in names[1:]])
-    return _added_columns(fits, degree, extra * np.sqrt(fits.weights)[:, None], method)
+    offsets = np.column_stack([(of == name).astype(np.float64) for name in compared]) * np.sqrt(fits.weights)[:, None]
+    lo, hi = fits.domain
+    t = ((fits.x - lo) + (fits.x - hi)) / (hi - lo)
+    slopes = offsets * t[:, None]
+    if not fits.intercept:
+        slopes = slopes[:, 1:]  # all together they are the slope of the curve itself
+    both = np.column_stack((offsets, slopes))
+    if degree > 0 and fits.df(degree) - both.shape[1] >= LEAST_SPARE_FOR_SLOPES:
+        found = _added_columns(fits, degree, both, f"F-test of one offset and one slope per series {source}")
+        if found.p is not None:
+            return found
+    return _added_columns(fits, degree, offsets, method)
 
 
 def _added_columns(fits: NestedFits, degree: int, extra: Floats, method: str) -> Statistic:
@@ -152,6 +174,8 @@ def normality(fits: NestedFits, degree: int) -> Statistic:
     large = fits.n > SHAPIRO_MOST
     method = "Jarque-Bera (1987)" if large else "Shapiro-Wilk (Royston 1995)"
     reason = exact_reason(fits, degree)
+    if reason is None and fits.df(degree) < LEAST_SPARE_FOR_NORMALITY:
+        reason = f"fewer than {LEAST_SPARE_FOR_NORMALITY} spare points"
     if reason:
         return Statistic(statistic=None, df=None, p=None, method=method, reason=reason)
     e = fits.residuals[:, degree]

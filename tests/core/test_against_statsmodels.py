@@ -162,14 +162,15 @@ def test_influence(n: int, degree: int) -> None:
 
 
 @pytest.mark.parametrize(("n", "degree"), PLAIN)
-def test_series_offsets(n: int, degree: int) -> None:
-    """F-test of one offset per series, against the model with dummy columns."""
+def test_series_offsets_and_slopes(n: int, degree: int) -> None:
+    """F-test of one offset and one slope per series, against the model with dummy columns and their products."""
     x, y, _ = dataset(n)
     series = [("a", "b", "c")[i % 3] for i in range(n)]
     ours = run(x, y, fixed(degree), series=series).diagnostics.series
-    dummies = np.column_stack([scaled_powers(x, degree), *(np.array(series) == s for s in ("b", "c"))])
+    of = [np.array(series) == s for s in ("b", "c")]
+    dummies = np.column_stack([scaled_powers(x, degree), *of, *(one * scaled_powers(x, 1)[:, 1] for one in of)])
     f, p, _ = sm.OLS(y, dummies.astype(float)).fit().compare_f_test(reference(n, degree, False))
-    assert ours.df == (2, n - degree - 3)
+    assert ours.df == (4, n - degree - 5)
     assert close(ours.statistic, f, 1e-8)
     assert close(ours.p, p, 1e-7)
 

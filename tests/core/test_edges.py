@@ -7,6 +7,7 @@ import pytest
 
 from service.core.observations import observe
 from service.core.plan import MaxPermissibleError, Plan, Requirements, Resampling
+from service.core.resolution import resolution
 from service.errors import InvalidInput
 from tests.core.data import Floats, close, fixed, noise, run, warning
 from tests.core.walk import all_finite
@@ -260,3 +261,56 @@ def test_bad_plans_name_the_field(given: dict[str, object], pointer: str) -> Non
     with pytest.raises(InvalidInput) as raised:
         Plan(**given)  # type: ignore[arg-type]
     assert [e.pointer for e in raised.value.errors] == [pointer]
+
+
+def test_known_uncertainty_stands_where_nothing_is_left() -> None:
+    """y = 2 x + 1 to the last digit, u_y = 0.1: the line is as uncertain as the readings say, not certain."""
+    x = np.arange(1.0, 9.0)
+    found = run(x, 2 * x + 1, fixed(1, weights="u_y", known_uncertainty=True), u_y=np.full(8, 0.1))
+    columns = np.vander(x, 2, increasing=True)
+    wanted = 0.1 * np.sqrt(np.diag(np.linalg.inv(columns.T @ columns)))
+    ours = found.curve.power
+    assert np.allclose(np.array(ours.standard_errors, dtype=float), wanted, rtol=1e-10)
+    assert np.allclose(np.array(ours.t, dtype=float), np.array([1.0, 2.0]) / wanted, rtol=1e-10)
+
+
+def test_many_points_in_units_beyond_a_double() -> None:
+    """Above the limit of exact arithmetic as below it: null where no double holds the power coefficient."""
+    x = np.linspace(1, 10, 20_001)
+    y = 2 * x + 0.01 * noise(20_001)
+    found = run(1e-55 * x, 1e50 * y, fixed(6, requirements=Requirements(monotonic=False)))
+    all_finite(found)
+    power = found.curve.power
+    assert power.coefficients[6] is None
+    assert power.coefficients[1] is not None
+    assert power.digits == 0
+    assert "use the Chebyshev coefficients" in power.method
+
+
+def test_a_constant_of_many_points_has_no_r_squared() -> None:
+    x = np.linspace(1, 10, 20_001)
+    found = run(x, np.full(20_001, 0.1), fixed(1))
+    assert found.curve.r2 is None
+    assert found.candidates[0].r2 is None
+
+
+def test_three_points_say_nothing_of_normality() -> None:
+    """Their residuals about a line have one shape, whatever the errors."""
+    found = run(np.array([1.0, 2.0, 3.0]), np.array([1.1, 2.0, 3.2]))
+    assert found.diagnostics.normality.p is None
+    assert found.diagnostics.normality.reason == "fewer than 3 spare points"
+
+
+@pytest.mark.parametrize(
+    ("readings", "step"),
+    [
+        ([1.1, 2.0, 3.2], 0.1),  # by chance all three differ by multiples of 0.3
+        ([0.5, 1.5, 2.5, 3.0, 4.5, 7.0], 0.5),
+        ([10.0, 40.0, 60.0, 90.0, 150.0, 210.0], 10.0),
+        ([0.02, 0.08, 0.14, 0.26, 0.38, 0.44], 0.02),  # by 0.06: scales come in 1, 2 and 5
+        ([1.0, 1.0, 2.0], None),
+    ],
+)
+def test_the_step_of_readings(readings: list[float], step: float | None) -> None:
+    found = resolution(np.array(readings))
+    assert found == step if step is None else close(found, step)

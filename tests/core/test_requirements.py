@@ -179,3 +179,11 @@ def test_bad_back_calculated_plans() -> None:
         with pytest.raises(InvalidInput) as raised:
             Plan(requirements=Requirements(back_calculated=bad))
         assert raised.value.errors[0].pointer == f"/requirements/back_calculated/{pointer}"
+
+
+def test_points_that_have_no_percentage_are_named() -> None:
+    """x = 0 in both: nothing is a share of 0, and whoever reads "met" must know that it was not judged."""
+    blank = MaxPermissibleError(value=50.0, kind="percent_of_value", of="x")
+    assert "1 point has no value to take a percentage of" in answer(Requirements(max_permissible_error=blank)).message
+    back = answer(Requirements(back_calculated=BackCalculated(limit_percent=50.0)))
+    assert "Blanks (x = 0): 1, not judged" in back.message

@@ -149,3 +149,64 @@ def test_a_limit_that_no_small_design_meets_is_said_so() -> None:
     found = run(*calibration(6), fixed(1, requirements=Requirements(max_unseen_bend=1e-6)))
     assert found.verdict.verdict == "undecided"
     assert any("No small number of further readings" in r.message for r in found.verdict.reasons)
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_readings_that_do_not_depend_on_x_decide_nothing(seed: int) -> None:
+    x = np.linspace(0, 10, 11)
+    y = 3 + 0.01 * noise(11, seed)
+    found = run(x, y)
+    assert found.curve.f.p is not None
+    if found.curve.f.p <= 0.05:  # as one set in twenty
+        return
+    assert found.verdict.verdict == "undecided"
+    assert "no_dependence" in [reason.code for reason in found.verdict.reasons]
+    (monotonic,) = [answer for answer in found.requirements if answer.requirement == "monotonic"]
+    assert monotonic.met is None
+
+
+def test_a_range_beyond_the_points_is_undecided_and_says_where_to_measure() -> None:
+    x = np.linspace(0, 10, 12)
+    y = 1 + 2 * x + 0.02 * noise(12)
+    found = run(x, y, Plan(working_range=(0, 25)))
+    assert found.verdict.verdict == "undecided"
+    assert "range_not_covered" in [reason.code for reason in found.verdict.reasons]
+    assert found.verdict.advice[0].at_x == (25.0,)
+    barely = run(x, y, Plan(working_range=(-0.1, 10.1)))
+    assert barely.verdict.verdict == "adequate"
+    assert "wide_gap" in [w.code for w in barely.warnings if w.severity == "note"]
+
+
+def test_a_share_of_the_value_is_held_against_the_bend_between_levels_too() -> None:
+    """Two clusters of levels: what hides between them hides from a percentage as from an absolute limit."""
+    x = np.concatenate((np.linspace(0, 2, 6), np.linspace(8, 10, 6)))
+    y = 100 + 0.1 * x + 0.02 * noise(12)
+    for kind in ("absolute", "percent_of_value"):
+        mpe = MaxPermissibleError(kind=kind, value=0.12, of="y")  # type: ignore[arg-type]
+        found = run(x, y, Plan(max_degree=4, requirements=Requirements(max_permissible_error=mpe)))
+        assert found.verdict.verdict == "undecided"
+
+
+def test_a_bend_that_shows_is_not_called_unseen() -> None:
+    x = np.linspace(0, 10, 11)
+    y = 2 * x + 0.03 * x * x + 0.02 * noise(11)
+    mpe = MaxPermissibleError(kind="absolute", value=0.448, of="y")
+    found = run(x, y, Plan(max_degree=1, requirements=Requirements(max_permissible_error=mpe)))
+    (reason,) = [reason for reason in found.verdict.reasons if reason.code == "bend_may_hide"]
+    assert "bend away from the curve" in reason.message
+    assert found.verdict.advice == ()
+
+
+def test_less_confidence_hides_no_bend() -> None:
+    x, y = calibration(12)
+    bends = [run(x, y, Plan(confidence=c)).unseen_bend.y for c in (0.5, 0.95, 0.99)]
+    assert bends[0] == bends[1]
+    assert bends[2] is not None
+    assert bends[1] is not None
+    assert bends[2] > bends[1]
+
+
+def test_what_is_too_little_says_what_to_add() -> None:
+    found = run(np.array([1.0, 2.0, 3.0]), np.array([1.1, 2.0, 3.2]))
+    (reason,) = [reason for reason in found.verdict.reasons if reason.code == "too_few_spare_points"]
+    assert found.verdict.advice[0].message in reason.message

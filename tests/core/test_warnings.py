@@ -119,6 +119,18 @@ def test_neighbours_correlated() -> None:
     assert warning(run(x, 3 * x + 0.1 * noise(40), fixed(1)), "neighbours_correlated") is None
 
 
+def test_what_neighbours_mean_depends_on_how_they_err() -> None:
+    """Measured in order of x, drift and bend look the same; errors in turn are no drift."""
+    x = np.linspace(1, 10, 40)
+    both = warning(run(x, 3 * x + 0.2 * np.sin(x) + 0.02 * noise(40), fixed(1)), "neighbours_correlated")
+    assert both is not None
+    assert "which is also the order of x" in both.message
+    in_turn = warning(run(x, 3 * x + np.tile([0.1, -0.1], 20) + 0.02 * noise(40), fixed(1)), "neighbours_correlated")
+    assert in_turn is not None
+    assert "in turn to opposite sides" in in_turn.message
+    assert "drift" not in in_turn.message
+
+
 def test_suspect_point() -> None:
     x, y = calibration(20)
     wild = y.copy()
@@ -163,7 +175,59 @@ def test_suspect_point_that_pulls_the_curve_is_serious() -> None:
     rest = np.delete(np.arange(15), 5)
     line, (rss,), *_ = np.polyfit(x[rest], y[rest], 1, full=True)
     moved = np.polyval(np.polyfit(x, y, 1), x[5]) - np.polyval(line, x[5])
-    assert f"pulled at x = {x[5]:g} by {moved / np.sqrt(rss / 12):.1f} times" in raised.message
+    assert f"pulled by up to {moved / np.sqrt(rss / 12):.3g} times" in raised.message
+
+
+def test_several_wild_points_do_not_hide_each_other() -> None:
+    """Two up and one down at fifty times the scatter: each alone is lost in the scatter that the others make."""
+    for seed in range(10):
+        x = np.linspace(0, 10, 15)
+        y = 2 * x + 0.01 * noise(15, seed)
+        y[[4, 7]] += 0.5
+        y[10] -= 0.5
+        found = run(x, y)
+        raised = warning(found, "suspect_point")
+        assert raised is not None
+        assert sorted(raised.evidence.points) == [4, 7, 10]
+        assert found.verdict.verdict == "inadequate"
+    clean = [warning(run(x, 2 * x + 0.01 * noise(15, seed)), "suspect_point") for seed in range(300)]
+    assert sum(one is not None for one in clean) <= 12
+
+
+def test_one_step_of_the_readings_is_no_wild_point() -> None:
+    """Readings to 0.1, all on the line but one, which is off by 0.1: their rounding alone can do that."""
+    x = np.arange(0.0, 101.0, 10.0)
+    y = x.copy()
+    y[4] = 40.1
+    assert warning(run(x, y), "suspect_point") is None
+    y[4] = 43.7
+    raised = warning(run(x, y), "suspect_point")
+    assert raised is not None
+    assert raised.evidence.points == (4,)
+
+
+def test_a_wild_point_under_a_fixed_degree_changes_no_choice() -> None:
+    x = np.linspace(1, 10, 20)
+    y = 3 * x + 0.02 * x**2 + 0.1 * noise(20)
+    y[10] += 0.5
+    raised = warning(run(x, y, fixed(3)), "suspect_point")
+    assert raised is None or raised.severity == "caution"
+
+
+def test_points_are_not_blamed_where_the_curve_is_wrong() -> None:
+    """A saturating curve, which no low degree follows."""
+    x = np.linspace(0, 10, 20)
+    found = run(x, 10 * x / (x + 3) + 0.01 * noise(20), Plan(max_degree=4))
+    raised, bends = warning(found, "suspect_point"), warning(found, "curvature_left")
+    assert bends is not None
+    assert raised is None or "it may be the curve that is wrong there" in raised.message
+
+
+def test_uncertainties_that_the_scatter_belies_make_no_wild_points() -> None:
+    x, y = calibration(20, sd=0.5)
+    found = run(x, y, Plan(known_uncertainty=True), u_y=np.full(20, 0.05))
+    assert warning(found, "uncertainty_inconsistent") is not None
+    assert warning(found, "suspect_point") is None
 
 
 def test_point_rules_fit() -> None:
@@ -229,6 +293,13 @@ def test_degree_at_limit() -> None:
     by_levels = warning(run(few, 20 * np.log(few) + 0.001 * noise(20)), "degree_at_limit")
     assert by_levels is not None
     assert "the number of levels and points" in by_levels.message
+    # a procedure that stops at a parabola, and a parabola: what lies above was tested, and does not show
+    x, y = calibration(12, bend=0.05)
+    by_procedure = warning(run(x, y, Plan(max_degree=2)), "degree_at_limit")
+    assert by_procedure is not None
+    assert by_procedure.severity == "note"
+    x = np.linspace(0.5, 10, 30)
+    y = 20 * np.log(x) + 0.001 * noise(30)
     # a degree that the plan fixes is not a limit that was run into
     assert warning(run(x, y, fixed(3)), "degree_at_limit") is None
 
@@ -295,7 +366,7 @@ def test_fold_inestimable() -> None:
     raised = warning(run(x, y, plan), "fold_inestimable")
     assert raised is not None
     assert raised.severity == "note"
-    assert "degrees 2" in raised.message
+    assert "degree 2 cannot be fitted" in raised.message
     chosen = warning(run(x, y, fixed(2, resampling=Resampling(scheme="leave_level_out"))), "fold_inestimable")
     assert chosen is not None
     assert chosen.severity == "caution"
@@ -338,8 +409,18 @@ def test_series_differ() -> None:
     raised = warning(run(x, y + np.repeat([0.0, 0.2], 15), series=series), "series_differ")
     assert raised is not None
     assert raised.severity == "caution"
-    assert raised.evidence.df == (1, 27)
+    assert raised.evidence.df == (2, 26)
     assert warning(run(x, y, series=series), "series_differ") is None
+
+
+def test_series_of_other_slopes_differ() -> None:
+    """They cross in the middle: no offset tells them apart."""
+    x = np.tile(np.linspace(-10, 10, 11), 3)
+    y = np.repeat([0.99, 1.0, 1.01], 11) * x + 0.005 * noise(33)
+    raised = warning(run(x, y, series=["a"] * 11 + ["b"] * 11 + ["c"] * 11), "series_differ")
+    assert raised is not None
+    assert raised.severity == "caution"
+    assert "rises more steeply" in raised.message
 
 
 def test_bend_may_hide() -> None:

@@ -2,12 +2,12 @@
 
 from collections.abc import Callable
 
-from service.core.checks import choice, curve, points, scatter
+from service.core.checks import choice, curve, points, scatter, suspects
 from service.core.findings import Findings
 from service.core.result import Warning
 
 CHECKS: tuple[Callable[[Findings], Warning | None], ...] = (
-    points.suspect_point,
+    suspects.suspect_point,
     curve.curvature_left,
     curve.not_monotonic,
     scatter.spread_changes,

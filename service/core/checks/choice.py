@@ -69,9 +69,10 @@ def fold_inestimable(found: Findings) -> Warning | None:
     if not lost[least:].any():
         return None
     chosen = int(lost[found.degree])
-    listed = ", ".join(f"{d}" for d in range(least, found.tried.top + 1) if lost[d])
+    degrees = [str(d) for d in range(least, found.tried.top + 1) if lost[d]]
+    listed = f"degree {degrees[0]}" if len(degrees) == 1 else f"the degrees {', '.join(degrees)}"
     message = (
-        f"Without some folds the degrees {listed} cannot be fitted at all, because too few levels are left"
+        f"Without some folds {listed} cannot be fitted at all, because too few levels are left"
         + ("; the chosen degree is among them, so cross-validation cannot vouch for it" if chosen else "")
         + ". Add levels, or use a resampling scheme that leaves out less."
     )

@@ -1,7 +1,8 @@
 """Warnings about the shape of the chosen curve."""
 
-from service.core.checks.levels import CAUTION, CAUTION_OF_TWO, from_test, severity_of
+from service.core.checks.levels import CAUTION, CAUTION_OF_TWO, NOTE, from_test, severity_of
 from service.core.findings import Findings
+from service.core.plan import Plan
 from service.core.result import Evidence, Statistic, Warning
 
 
@@ -24,6 +25,7 @@ def curvature_left(found: Findings) -> Warning | None:
         f"The readings still bend away from the degree-{found.degree} curve more than their scatter explains: values "
         "found with it carry a systematic error that averaging does not remove. Look at the residuals by x; if the "
         "bend repeats in a second run, allow a higher degree or narrow the working range."
+        + ("" if found.plan.intercept else " Or the instrument does not read 0 at 0, as the plan has the curve do.")
     )
     return from_test("curvature_left", worst, severity, message, threshold=level)
 
@@ -53,8 +55,25 @@ def degree_at_limit(found: Findings) -> Warning | None:
     if found.degree < found.tried.top or found.degree <= found.plan.min_degree:
         return None
     by_plan = found.tried.top == found.plan.max_degree
+    further = found.diagnostics.next_terms.p
+    asked = found.plan.max_degree < Plan().max_degree  # a procedure's own limit, not the one that nobody chose
+    if by_plan and asked and further is not None and further >= NOTE:
+        return Warning(
+            code="degree_at_limit",
+            severity="note",
+            message=(
+                f"Degree {found.degree} is the highest that the plan allows. Terms beyond it were tested all the same "
+                f"and do not show (p = {further:.2g}), so nothing asks for more."
+            ),
+            evidence=Evidence(value=float(found.degree), threshold=float(found.tried.top), p=further),
+            method=found.diagnostics.next_terms.method,
+        )
     limit = "the plan's max_degree" if by_plan else "the number of levels and points"
-    action = "Raise max_degree and run again" if by_plan else "Measure at more levels and run again"
+    action = (
+        "Where the procedure leaves the degree open, raise max_degree and run again"
+        if by_plan
+        else "Measure at more levels and run again"
+    )
     return Warning(
         code="degree_at_limit",
         severity="caution",

@@ -1,5 +1,7 @@
 """Warnings about the scatter of the readings round the curve."""
 
+import numpy as np
+
 from service.core.checks.levels import CAUTION, CAUTION_OF_TWO, from_test, severity_of
 from service.core.findings import Findings
 from service.core.result import Evidence, Warning
@@ -16,8 +18,12 @@ def spread_changes(found: Findings) -> Warning | None:
         return None
     message = (
         "The scatter of the readings changes along the range more than the weights used allow for: stated "
-        "uncertainties are too small where readings scatter most and too large elsewhere. Give u_y for each reading, "
-        "or ask for weights 1/x or 1/x^2 where scatter grows with x."
+        "uncertainties are too small where readings scatter most and too large elsewhere. Give u_y for each reading"
+        + (
+            ", or ask for weights 1/x or 1/x^2 where scatter grows with x."
+            if bool((found.observations.x != 0).all())
+            else " (weights 1/x and 1/x^2 have no value at x = 0)."
+        )
     )
     return from_test("spread_changes", test, severity, message, threshold=CAUTION)
 
@@ -45,19 +51,36 @@ def neighbours_correlated(found: Findings) -> Warning | None:
     severity = severity_of(p, caution=CAUTION_OF_TWO)
     if severity is None:
         return None
+    steps = np.diff(found.observations.x)
+    both = bool((steps >= 0).all() or (steps <= 0).all())  # measured in order of x: time and x are one
     alike = test.statistic is not None and test.statistic < 2
-    if order == "time":
-        cause = (
-            "in the order measured: the instrument drifts, warms up or shows hysteresis. Measure the levels in random "
-            "order, name the passes as series, and let the instrument settle"
-        )
-    else:
-        cause = "in order of x: a bend is left, or levels share an error of their standard. Look at the residuals by x"
-    message = (
-        f"Neighbouring readings err {'alike' if alike else 'in turn to opposite sides'} {cause}. Until then the "
-        "uncertainty of the curve is understated."
-    )
+    series = "look at the series apart" if found.observations.series else "name the passes as series"
+    message = _alike("both" if both else order, series) if alike else _in_turn(order, series)
     return from_test("neighbours_correlated", test, severity, message, threshold=CAUTION_OF_TWO)
+
+
+def _alike(order: str, series: str) -> str:
+    causes = {
+        "time": (
+            "in the order measured: the instrument drifts, warms up or shows hysteresis. Measure the levels in random "
+            f"order, {series}, and let the instrument settle"
+        ),
+        "x": "in order of x: a bend is left, or levels share an error of their standard. Look at the residuals by x",
+        "both": (
+            "in the order measured, which is also the order of x: a bend that is left, a curve forced through 0, and a "
+            "drift of the instrument look the same. Measure the levels in random order, and look at the residuals by x"
+        ),
+    }
+    return f"Neighbouring readings err alike {causes[order]}. Until then the uncertainty of the curve is understated."
+
+
+def _in_turn(order: str, series: str) -> str:
+    where = "in order of x" if order == "x" else "in the order measured"
+    return (
+        f"Neighbouring readings err in turn to opposite sides {where}: two kinds of readings alternate, such as rising "
+        f"and falling passes (hysteresis), two channels or two observers; {series}. Until then the scatter "
+        "is that between the two, not that of one reading."
+    )
 
 
 def series_differ(found: Findings) -> Warning | None:
@@ -67,9 +90,9 @@ def series_differ(found: Findings) -> Warning | None:
     if severity is None:
         return None
     message = (
-        "The series do not lie on one curve: at least one sits higher or lower as a whole (hysteresis, another day, "
-        "another operator). The common curve is right for none of them. Find the cause, or add the difference between "
-        "series to the uncertainty."
+        "The series do not lie on one curve: at least one sits higher or lower, or rises more steeply, as a whole "
+        "(hysteresis, another day, another operator). The common curve is right for none of them. Find the cause, or "
+        "add the difference between series to the uncertainty."
     )
     return from_test("series_differ", test, severity, message, threshold=CAUTION)
 

@@ -36,7 +36,14 @@ class BatchBody(Body):
     datasets: list[Any] = Field(
         min_length=1,
         description="Datasets as of POST /v1/datasets. A bad one is refused by itself.",
-        json_schema_extra={"items": {"$ref": "#/components/schemas/DatasetBody"}},
+        json_schema_extra={
+            "items": {
+                "anyOf": [
+                    {"$ref": "#/components/schemas/DatasetBody"},
+                    {"description": "Anything else: the batch is taken, and this item is refused by itself."},
+                ]
+            }
+        },
     )
     plan: PlanBody | None = Field(None, description="Absent, and no plan_id: every default.")
     plan_id: Label | None = None
