@@ -1,5 +1,6 @@
 """Commands that keep an installation, run as a user runs them."""
 
+import hashlib
 import sqlite3
 import subprocess
 import sys
@@ -7,6 +8,7 @@ from collections.abc import Iterator
 from contextlib import closing
 from pathlib import Path
 
+import psycopg
 import pytest
 
 from service.client import Client, ProblemError
@@ -36,6 +38,7 @@ def data_dir(tmp_path: Path) -> Path:
         for column in ("queued_at", "started_at", "finished_at"):
             connection.execute(f"UPDATE jobs SET {column} = {column} - ? WHERE id = ?", (LONG_AGO, oldest))
         connection.execute("UPDATE datasets SET created_at = created_at - ?", (LONG_AGO,))
+        connection.execute("UPDATE dataset_posts SET posted_at = posted_at - ?", (LONG_AGO,))
         connection.commit()
     return directory
 
@@ -53,6 +56,22 @@ def test_check_finds_one_changed_character(data_dir: Path) -> None:
     bad = leastbend("check", "--data-dir", str(data_dir))
     assert bad.returncode == 1
     assert "is not what its digest says" in bad.stdout
+
+
+def test_check_finds_a_result_altered_together_with_its_digest(data_dir: Path) -> None:
+    with closing(sqlite3.connect(data_dir / FILE_NAME)) as connection:
+        job_id, document = connection.execute("SELECT job_id, document FROM results ORDER BY job_id LIMIT 1").fetchone()
+        altered = document.replace('"chosen_degree":1', '"chosen_degree":5')
+        assert altered != document
+        digest = hashlib.sha256(altered.encode()).hexdigest()
+        connection.execute("UPDATE results SET document = ?, digest = ? WHERE job_id = ?", (altered, digest, job_id))
+        connection.execute("UPDATE jobs SET verdict = 'inadequate', chosen_degree = 5 WHERE id = ?", (job_id,))
+        connection.execute("UPDATE verdicts SET verdict = 'inadequate' WHERE job_id = ?", (job_id,))
+        connection.commit()
+    done = leastbend("check", "--data-dir", str(data_dir))
+    assert done.returncode == 1
+    assert "1 digests wrong" in done.stdout
+    assert f"verdict 1 of job {job_id} says verdict 'adequate', its own row 'inadequate'" in done.stdout
 
 
 def test_backup_is_an_installation_of_its_own(data_dir: Path, tmp_path: Path) -> None:
@@ -109,7 +128,6 @@ def test_move_carries_everything_and_the_service_goes_on(data_dir: Path, empty_p
         (("move", "--to", "mysql://x"), "LEASTBEND_DATABASE_URL"),
         (("purge", "--older-than", "0"), "at least 1 day"),
         (("keys", "create", "--name", "", "--role", "read"), "1 to 200"),
-        (("keys", "revoke", "--name", "nobody"), "no key nobody"),
         (("backup", "--to", "b.db"), "there is no"),
     ],
 )
@@ -118,6 +136,40 @@ def test_commands_say_what_is_wrong(tmp_path: Path, words: tuple[str, ...], said
     assert done.returncode == 1
     assert said in done.stderr
     assert "Traceback" not in done.stderr
+
+
+LOOKS = [("check",), ("purge", "--older-than", "9"), ("keys", "list"), ("keys", "revoke", "--name", "a")]
+
+
+@pytest.mark.parametrize("words", [*LOOKS, ("backup", "--to", "b.db")])
+def test_a_mistyped_directory_is_refused_and_not_made(tmp_path: Path, words: tuple[str, ...]) -> None:
+    nowhere = tmp_path / "nowhere"
+    done = leastbend(*words, "--data-dir", str(nowhere))
+    assert (done.returncode, done.stdout) == (1, "")
+    assert done.stderr == f"leastbend: there is no leastbend.db in {nowhere}\n"
+    assert not nowhere.exists()
+
+
+def test_a_file_that_is_no_installation_is_refused(tmp_path: Path) -> None:
+    file = tmp_path / FILE_NAME
+    for content, said in ((b"", "the database is empty"), (b"not a database" * 1000, "the database cannot be read")):
+        file.write_bytes(content)
+        done = leastbend("check", "--data-dir", str(tmp_path))
+        assert (done.returncode, done.stdout) == (1, "")
+        assert done.stderr.startswith(f"leastbend: {said}")
+        assert "Traceback" not in done.stderr
+
+
+@pytest.mark.parametrize("words", LOOKS)
+def test_an_empty_postgresql_is_refused_and_left_empty(
+    empty_postgres: str, words: tuple[str, ...], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("LEASTBEND_DATABASE_URL", empty_postgres)
+    done = leastbend(*words)
+    assert (done.returncode, done.stdout) == (1, "")
+    assert "the database is empty" in done.stderr
+    with psycopg.connect(empty_postgres.replace("+psycopg", "")) as connection:
+        assert connection.execute("SELECT count(*) FROM pg_tables WHERE schemaname = 'public'").fetchone() == (0,)
 
 
 @pytest.fixture
@@ -136,5 +188,8 @@ def test_keys_made_by_the_command_open_the_service(keyed: tuple[str, str], tmp_p
         assert client.job(job["id"])["submitted_by"] == "bench-1"
     assert "bench-1\tsubmit" in leastbend("keys", "list", "--data-dir", str(tmp_path)).stdout
     assert leastbend("keys", "revoke", "--data-dir", str(tmp_path), "--name", "bench-1").returncode == 0
+    unknown = leastbend("keys", "revoke", "--data-dir", str(tmp_path), "--name", "nobody")
+    assert unknown.returncode == 1
+    assert "no key nobody" in unknown.stderr
     with Client(address, key=key) as client, pytest.raises(ProblemError, match="unauthenticated"):
         client.job(job["id"])

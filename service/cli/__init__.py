@@ -19,7 +19,7 @@ COMMANDS = {
     "backup": ("service.cli.keeping:backup", "Copy the SQLite database to a new file while the service runs."),
     "move": ("service.cli.keeping:move", "Carry an embedded installation to an empty PostgreSQL, digests checked."),
     "purge": ("service.cli.keeping:purge", "Remove points, results and events of what ended long ago; verdicts stay."),
-    "check": ("service.cli.keeping:check", "Compute every digest again, and follow the chain of verdicts."),
+    "check": ("service.cli.keeping:check", "Compute every digest again; hold verdicts and rows against each other."),
     "demo": ("service.cli.running:demo", "Start the real service on invented data and show what comes back."),
 }
 KEY_COMMANDS = {

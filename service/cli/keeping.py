@@ -58,12 +58,14 @@ def purge(asked: dict[str, Any]) -> int:
 
 
 def check(asked: dict[str, Any]) -> int:
-    """Compute every digest again, and follow the chain of verdicts from the first to the last."""
+    """Compute every digest again, follow the chain of verdicts, and hold each against the rows that it speaks of."""
     with opened(settings_of(asked)) as database:
         checked = verify_digests(database)
     _print_checked(checked)
     for mistake in checked.mistakes:
         print(mistake)
+    if checked.wrong > len(checked.mistakes):
+        print(f"... and {checked.wrong - len(checked.mistakes)} more")
     return 1 if checked.wrong else 0
 
 
@@ -72,4 +74,4 @@ def _print_checked(checked: Checked) -> None:
         print(f"{kind:16} {number:>8} digests right")
     if checked.purged:
         print(f"{checked.purged} datasets have lost their points to a purge: their digests cannot be checked.")
-    print(f"{checked.wrong} digests wrong")
+    print(f"{checked.wrong} digests wrong, missing or contradicted")

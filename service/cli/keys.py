@@ -13,7 +13,7 @@ def create(asked: dict[str, Any]) -> int:
     name, role = asked.pop("name"), asked.pop("role")
     if not 0 < len(name) <= 200 or not name.isprintable():
         raise InvalidInput.at("/name", "must be 1 to 200 printable characters")
-    with opened(settings_of(asked)) as database:
+    with opened(settings_of(asked), make=True) as database:
         key, secret = create_key(database, name=name, role=role, now=utc_now())
     print(f"key: {key}\nnotification secret: {secret}\nNeither is shown again; only a hash of the key is kept.")
     return 0

@@ -30,7 +30,7 @@ def serve(asked: dict[str, Any]) -> int:
         asked["workers"] = 0
     settings = settings_of(asked)
     log_as_json(settings.log_level)
-    with opened(settings) as database:
+    with opened(settings, make=True) as database:
         guarded = bool(list_keys(database))
     if not guarded and not is_loopback(settings.host):
         raise Unusable(
