@@ -76,6 +76,19 @@ def test_every_older_revision_migrates_with_its_data(empty: Database, revision: 
     assert tuple(row) == ("j", "queued", 0)
 
 
+def test_posts_from_before_have_the_time_of_their_dataset(empty: Database) -> None:
+    upgrade(empty, "0001")
+    queue_of_old(empty)
+    upgrade(empty, "0004")
+    with empty.write() as connection:
+        connection.execute(text("UPDATE datasets SET created_at = 1234567 WHERE id = 'd'"))
+        connection.execute(text("INSERT INTO dataset_posts (submitted_by, dataset_id) VALUES ('bert', 'd')"))
+    migrate(empty)
+    with empty.read() as connection:
+        rows = connection.execute(text("SELECT submitted_by, posted_at FROM dataset_posts ORDER BY submitted_by")).all()
+    assert [tuple(row) for row in rows] == [("anna", 1234567), ("bert", 1234567)]  # anna's by revision 0003
+
+
 def test_tables_are_what_the_code_says(empty: Database) -> None:
     migrate(empty)
     with empty.read() as connection:

@@ -1,6 +1,8 @@
 """Datasets: their canonical document and digest, storing each content once, and reading them back exactly."""
 
 import json
+from collections.abc import Collection
+from datetime import datetime
 from typing import Any, cast
 
 import numpy as np
@@ -25,11 +27,18 @@ HEAD = (
     datasets.c.details,
 )
 
-FIND_DIGEST = select(datasets.c.id, func.length(datasets.c.x).label("size")).where(
-    datasets.c.digest == bindparam("of_digest")
+# Locked until the commit: on PostgreSQL retention might otherwise take the points meanwhile.
+FIND_DIGEST = (
+    select(datasets.c.id, func.length(datasets.c.x).label("size"))
+    .where(datasets.c.digest == bindparam("of_digest"))
+    .with_for_update(key_share=True)
 )
 ADD = insert(datasets).on_conflict_do_nothing(index_elements=["digest"]).returning(datasets.c.id)
-POSTED = insert(dataset_posts).on_conflict_do_nothing()
+POSTING = insert(dataset_posts)
+POSTED = POSTING.on_conflict_do_update(
+    index_elements=["submitted_by", "dataset_id"], set_={"posted_at": POSTING.excluded.posted_at}
+)
+AT_ONCE = 500  # datasets of one statement
 LOAD = select(datasets).where(datasets.c.id == bindparam("of_id"))
 
 
@@ -90,10 +99,33 @@ def store(
     return found.id, False
 
 
-def posted(connection: Connection, dataset_id: str, submitted_by: str) -> None:
-    """Remember that this submitter has posted it."""
-    row = {"dataset_id": dataset_id, "submitted_by": submitted_by}
+def posted(connection: Connection, dataset_id: str, submitted_by: str, now: datetime) -> None:
+    """Remember that this submitter has posted it, and when the last time was."""
+    row = {"dataset_id": dataset_id, "submitted_by": submitted_by, "posted_at": now}
     connection.execute(POSTED, row)
+
+
+def demand_points(connection: Connection, digests: Collection[str]) -> None:
+    """Raises Conflict unless the points of all these datasets are there, and keeps them there until the commit.
+
+    They are locked in the order of their digests, as every writer of many datasets does: so none waits for another
+    that waits for it.
+    """
+    wanted = sorted(set(digests))
+    for start in range(0, len(wanted), AT_ONCE):
+        query = (
+            select(datasets.c.id, func.length(datasets.c.x).label("size"))
+            .where(datasets.c.digest.in_(wanted[start : start + AT_ONCE]))
+            .order_by(datasets.c.digest)
+            .with_for_update(read=True)
+        )
+        for row in connection.execute(query):
+            if row.size == 0:
+                raise _purged(row.id)
+
+
+def _purged(dataset_id: str) -> Conflict:
+    return Conflict(f"the points of dataset {dataset_id} were removed; post the dataset again", code="dataset_purged")
 
 
 def find(connection: Connection, dataset_id: str, *, posted_by: str | None = None) -> DatasetRecord | None:
@@ -112,9 +144,7 @@ def load(connection: Connection, dataset_id: str, *, purged_too: bool = False) -
     if row is None:
         return None
     if not row["x"] and not purged_too:
-        raise Conflict(
-            f"the points of dataset {dataset_id} were removed; post the dataset again", code="dataset_purged"
-        )
+        raise _purged(dataset_id)
     content = DatasetContent(
         subject=row["subject"],
         x=_floats(row["x"]),

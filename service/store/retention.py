@@ -8,7 +8,7 @@ from datetime import datetime
 
 from sqlalchemy import ColumnElement, Connection, and_, delete, exists, func, insert, or_, select, update
 
-from service.store.tables import FINAL, datasets, figures, job_events, jobs, notifications, results
+from service.store.tables import FINAL, dataset_posts, datasets, figures, job_events, jobs, notifications, results
 
 PURGED = "purged"
 
@@ -29,19 +29,33 @@ def purge_jobs(connection: Connection, ids: Sequence[str], now: datetime) -> Non
     connection.execute(insert(job_events), marks)
 
 
-def old_datasets(connection: Connection, before: datetime, *, limit: int | None) -> Sequence[str]:
-    """Datasets posted before that moment, with points, that no job needs which is younger or has not ended."""
+def old_datasets(connection: Connection, before: datetime, *, limit: int | None, lock: bool = False) -> Sequence[str]:
+    """Datasets with points, last posted before that moment, that no job needs which is younger or has not ended.
+
+    `lock`: for `purge_datasets`, without those that somebody is posting or using at this moment.
+    """
+    query = select(datasets.c.id).where(_unused(before)).order_by(datasets.c.id).limit(limit)
+    if lock:
+        query = query.with_for_update(skip_locked=True)
+    return connection.execute(query).scalars().all()
+
+
+def purge_datasets(connection: Connection, ids: Sequence[str], before: datetime) -> int:
+    """Empty the columns of these locked datasets; answers how many were.
+
+    Asked again whether each is old: PostgreSQL's first look may have been before a job's commit, its lock after it.
+    """
+    empty = {"x": b"", "y": b"", "u_x": None, "u_y": None, "series": None}
+    still = update(datasets).where(datasets.c.id.in_(ids), _unused(before)).values(**empty)
+    return connection.execute(still).rowcount
+
+
+def _unused(before: datetime) -> ColumnElement[bool]:
     needed = exists().where(
         jobs.c.dataset_id == datasets.c.id, or_(jobs.c.finished_at.is_(None), jobs.c.finished_at >= before)
     )
-    query = select(datasets.c.id).where(datasets.c.created_at < before, func.length(datasets.c.x) > 0, ~needed)
-    return connection.execute(query.order_by(datasets.c.id).limit(limit)).scalars().all()
-
-
-def purge_datasets(connection: Connection, ids: Sequence[str]) -> None:
-    """Empty their columns."""
-    empty = {"x": b"", "y": b"", "u_x": None, "u_y": None, "series": None}
-    connection.execute(update(datasets).where(datasets.c.id.in_(ids)).values(**empty))
+    posted = exists().where(dataset_posts.c.dataset_id == datasets.c.id, dataset_posts.c.posted_at >= before)
+    return and_(datasets.c.created_at < before, func.length(datasets.c.x) > 0, ~needed, ~posted)
 
 
 def _old(before: datetime) -> ColumnElement[bool]:

@@ -208,11 +208,13 @@ keys = Table(
     CheckConstraint("role IN ('submit', 'read', 'admin')", name="role_known"),
 )
 
-dataset_posts = Table(  # who has posted a dataset: the same content is stored once
+dataset_posts = Table(  # who has posted a dataset, and when: the same content is stored once
     "dataset_posts",
     metadata,
     Column("submitted_by", Text, primary_key=True),
     Column("dataset_id", Id, ForeignKey(datasets.c.id), primary_key=True),
+    Column("posted_at", Instant, nullable=False, server_default="0"),  # the last time
+    Index(None, "dataset_id", "posted_at"),
 )
 
 repeats = Table(  # Idempotency-Key: what a post has made, so that the same post again makes nothing

@@ -43,7 +43,7 @@ def submit_batch(
 ) -> str:
     """Put in one job for each good dataset and keep the reason for each bad one; the batch's id.
 
-    Raises TooLarge, InvalidInput, Overloaded, Forbidden.
+    Raises TooLarge, InvalidInput, Overloaded, Forbidden, Conflict.
     """
     caller.must_submit()
     if not posted:
@@ -80,6 +80,7 @@ def submit_batch(
         if before is not None:
             return before
         demand_room(connection, settings, len(new), outcome="the datasets were stored, no job was put in")
+        datasets.demand_points(connection, [dataset_digest for _, _, dataset_digest in good])
         plans.store(connection, document, plan_digest, now)
         if new:
             add_jobs(connection, caller, new, now)
@@ -93,14 +94,15 @@ def submit_batch(
 
 def _keep_datasets(database: Database, caller: Caller, good: Sequence[Good], now: datetime) -> list[str]:
     """Ids of the stored datasets. In steps, so that others can write in between: a dataset alone means nothing yet, and
-    the same batch posted again finds those that are there.
+    the same batch posted again finds those that are there. In the order of digests, in which all lock them.
     """
-    ids: list[str] = []
+    ids: dict[str, str] = {}
+    by_digest = sorted(good, key=lambda one: one[2])
     for start in range(0, len(good), STEP):
         with database.write() as connection:
-            for content, observed, dataset_digest in good[start : start + STEP]:
-                ids.append(keep_dataset(connection, caller, content, observed, dataset_digest, now)[0])
-    return ids
+            for content, observed, dataset_digest in by_digest[start : start + STEP]:
+                ids[dataset_digest] = keep_dataset(connection, caller, content, observed, dataset_digest, now)[0]
+    return [ids[dataset_digest] for _, _, dataset_digest in good]
 
 
 def _checked(one: Posted, plan: Plan, settings: Settings) -> Good | dict[str, Any]:

@@ -36,10 +36,9 @@ def purge(database: Database, *, before: datetime, now: datetime, dry_run: bool)
             break
     while True:
         with database.write() as connection:
-            ids = retention.old_datasets(connection, before, limit=STEP)
+            ids = retention.old_datasets(connection, before, limit=STEP, lock=True)
             if ids:
-                retention.purge_datasets(connection, ids)
-        datasets += len(ids)
+                datasets += retention.purge_datasets(connection, ids, before)
         if not ids:
             break
     return Purged(jobs=jobs, datasets=datasets, dry_run=False)

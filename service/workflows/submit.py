@@ -75,7 +75,7 @@ def submit_job(
 ) -> tuple[JobDetail, NotificationRecord | None]:
     """Put in a job and answer it; with a `repeat_key` (Idempotency-Key) that was used before, that job as it now is.
 
-    Raises InvalidInput, TooLarge, Overloaded, Forbidden.
+    Raises InvalidInput, TooLarge, Overloaded, Forbidden, Conflict.
     """
     caller.must_submit()
     job_id = new_id()
@@ -98,6 +98,7 @@ def submit_job(
             subject = asked.dataset.subject
         else:
             dataset_id, subject = _stored(connection, caller, asked.dataset_id or "")
+            datasets.demand_points(connection, [dataset_digest])  # which retention may have taken since they were read
         plans.store(connection, document, plan_digest, now)
         new = NewJob(
             job_id=job_id,
@@ -152,7 +153,7 @@ def keep_dataset(
     dataset_id, new = datasets.store(connection, content, document_digest, datasets.summarise(content, observed), now)
     if not new:
         new = datasets.find(connection, dataset_id, posted_by=caller.only_own) is None
-    datasets.posted(connection, dataset_id, caller.name)
+    datasets.posted(connection, dataset_id, caller.name, now)
     return dataset_id, new
 
 

@@ -1,14 +1,24 @@
 """Purging by age: what goes, what stays, the dry run, and data that come back."""
 
-import pytest
+import threading
+from typing import Any
 
+import pytest
+from sqlalchemy import func, select
+
+from service.core.plan import Plan
 from service.errors import Conflict
 from service.store import datasets
+from service.store.codec import digest
 from service.store.integrity import check_digests
+from service.store.records import DatasetRecord
+from service.store.tables import batch_items, jobs
+from service.workflows import batches, submit
+from service.workflows.callers import Caller
 from service.workflows.retention import Purged, purge
 from service.workflows.run import run_job
-from service.workflows.submit import Submission
-from tests.jobs import MACHINE, Desk, at
+from service.workflows.submit import Submission, post_dataset
+from tests.jobs import MACHINE, Desk, at, calibration
 
 DAY = 86_400
 
@@ -63,6 +73,102 @@ def test_points_that_a_younger_or_waiting_job_needs_stay(desk: Desk) -> None:
     assert purge(desk.database, before=at(4 * DAY), now=at(9 * DAY), dry_run=False).datasets == 0
     assert purge(desk.database, before=at(6 * DAY), now=at(9 * DAY), dry_run=False).datasets == 1
     assert desk.history(first) == ["purged"]
+
+
+def test_points_that_were_posted_again_stay_until_that_is_old(desk: Desk) -> None:
+    """Whoever posts a dataset and then a job on it must not find it purged by the age of another's post."""
+    first = finished(desk, 0, seconds=0)
+    record, new = post(desk, 0, by="bert", seconds=5 * DAY)
+    assert (record.id, record.created_at, new) == (desk.job(first).dataset_id, at(0), True)
+    assert purge(desk.database, before=at(4 * DAY), now=at(9 * DAY), dry_run=True).datasets == 0
+    assert purge(desk.database, before=at(4 * DAY), now=at(9 * DAY), dry_run=False).datasets == 0
+    post(desk, 0, by="bert", seconds=7 * DAY)
+    post(desk, 0, by="anna", seconds=6 * DAY)
+    assert purge(desk.database, before=at(7 * DAY), now=at(9 * DAY), dry_run=False).datasets == 0
+    assert purge(desk.database, before=at(7 * DAY + 1), now=at(9 * DAY), dry_run=False).datasets == 1
+
+
+def post(desk: Desk, seed: int, *, by: str, seconds: float) -> tuple[DatasetRecord, bool]:
+    caller = Caller(name=by, role="submit")
+    return post_dataset(desk.database, caller, calibration(seed), most=100, now=at(seconds))
+
+
+def test_points_purged_between_reading_and_putting_in_refuse_the_job(
+    desk: Desk, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    dataset_id = desk.job(finished(desk, 0, seconds=0)).dataset_id
+    whole = submit._checked
+
+    def then_purged(*words: Any) -> Any:
+        found = whole(*words)
+        assert purge(desk.database, before=at(DAY), now=at(2 * DAY), dry_run=False).datasets == 1
+        return found
+
+    monkeypatch.setattr(submit, "_checked", then_purged)
+    with pytest.raises(Conflict) as refused:
+        desk.submit(Submission(dataset_id=dataset_id), seconds=2 * DAY)
+    assert refused.value.code == "dataset_purged"
+    assert desk.take(seconds=3 * DAY) is None
+
+
+def test_points_purged_before_the_jobs_of_a_batch_refuse_it(desk: Desk, monkeypatch: pytest.MonkeyPatch) -> None:
+    whole = batches._keep_datasets
+
+    def then_purged(*words: Any) -> Any:
+        found = whole(*words)
+        assert purge(desk.database, before=at(2 * DAY), now=at(2 * DAY), dry_run=False).datasets == 3
+        return found
+
+    monkeypatch.setattr(batches, "_keep_datasets", then_purged)
+    words = (desk.database, desk.transport, desk.settings, Caller(name="anna", role="submit"))
+    posted = [calibration(seed) for seed in range(3)]
+    with pytest.raises(Conflict) as refused:
+        batches.submit_batch(*words, posted, Plan(), priority=0, repeat_key=None, now=at(DAY))
+    assert refused.value.code == "dataset_purged"
+    assert desk.take(seconds=3 * DAY) is None
+    monkeypatch.undo()
+    batches.submit_batch(*words, posted, Plan(), priority=0, repeat_key=None, now=at(DAY))
+    assert desk.take(seconds=3 * DAY) is not None
+
+
+def test_points_in_the_hands_of_somebody_are_not_purged(desk: Desk) -> None:
+    """On PostgreSQL purging and putting in go on at once; on SQLite one waits for the other."""
+    if not desk.database.postgres:
+        pytest.skip("one writer at a time")
+    used, posted, neither = (desk.job(finished(desk, seed, seconds=0)) for seed in range(3))
+    content = calibration(1)
+    digest_of = digest(datasets.dataset_document(content))
+    with desk.database.write() as using, desk.database.write() as posting:
+        found = datasets.find(using, used.dataset_id)
+        assert found is not None
+        datasets.demand_points(using, [found.digest])
+        assert datasets.store(posting, content, digest_of, {}, at(0)) == (posted.dataset_id, False)
+        assert purge(desk.database, before=at(DAY), now=at(DAY), dry_run=False).datasets == 1
+    with desk.database.read() as connection:
+        for kept in (used, posted):
+            assert datasets.load(connection, kept.dataset_id) is not None
+        with pytest.raises(Conflict):
+            datasets.load(connection, neither.dataset_id)
+
+
+def test_many_batches_of_the_same_datasets_do_not_wait_for_each_other_for_ever(desk: Desk) -> None:
+    words = (desk.database, desk.transport, desk.settings, Caller(name="anna", role="submit"))
+    made = list[str]()
+
+    def put(order: int) -> None:
+        posted = [calibration(seed) for seed in range(30)][:: 1 if order % 2 else -1]
+        made.append(batches.submit_batch(*words, posted, Plan(), priority=0, repeat_key=None, now=at(0)))
+
+    threads = [threading.Thread(target=put, args=(order,)) for order in range(6)]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+    assert len(set(made)) == 6
+    with desk.database.read() as connection:
+        rows = connection.execute(select(batch_items.c.batch_id, jobs.c.subject).join(jobs)).all()
+        assert connection.execute(select(func.count()).select_from(batch_items)).scalar_one() == 180
+    assert {subject for _, subject in rows} == {f"gauge-{seed}" for seed in range(30)}
 
 
 def test_purged_points_come_back_when_posted_again(desk: Desk) -> None:

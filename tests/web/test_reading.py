@@ -1,10 +1,12 @@
 """Reading back: conditional requests, pages and polling that neither skip nor repeat, immutable plans."""
 
 import threading
+from datetime import timedelta
 from typing import Any
 
 import pytest
 
+from service.workflows.retention import purge
 from tests.web.service import Service
 
 DATASET: dict[str, Any] = {
@@ -44,6 +46,24 @@ def test_what_the_caller_has_is_not_sent_again(service: Service) -> None:
             assert (answer.status_code, answer.content) == (200, whole.content), (path, asked)
     tags = {service.http.get(f"/v1/datasets/{dataset}{query}").headers["etag"] for query in ("", "?include=points")}
     assert len(tags) == 2
+
+
+def test_a_datasets_tag_changes_with_its_document(service: Service) -> None:
+    """It says when it was stored, which is another time after its points were removed and posted again."""
+    path = "/v1/datasets/" + service.http.post("/v1/datasets", json=DATASET).json()["id"]
+    first = {query: service.http.get(path + query) for query in ("", "?include=points")}
+    later = service.context.now() + timedelta(seconds=1)
+    assert purge(service.database, before=later, now=later, dry_run=False).datasets == 1
+    gone = service.http.get(path, params={"include": "points"})
+    assert (gone.status_code, gone.json()["code"]) == (409, "dataset_purged")
+    job = service.http.post("/v1/jobs", json={"dataset_id": path.split("/")[-1]})
+    assert (job.status_code, job.json()["code"]) == (409, "dataset_purged")
+    assert service.http.post("/v1/datasets", json=DATASET).status_code == 200
+    for query, old in first.items():
+        new = service.http.get(path + query, headers={"If-None-Match": old.headers["etag"]})
+        assert new.status_code == 200
+        assert new.json()["created_at"] > old.json()["created_at"]
+        assert new.headers["etag"] != old.headers["etag"]
 
 
 def test_a_jobs_tag_changes_with_it(service: Service) -> None:

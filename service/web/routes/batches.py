@@ -53,7 +53,7 @@ async def posted_batch(
     "",
     status_code=202,
     response_model=BatchView,
-    responses=documented(400, 401, 403, 413, 415, 422, 429, 503),
+    responses=documented(400, 401, 403, 409, 413, 415, 422, 429, 503),
     operation_id="post_batch",
     openapi_extra=takes(BatchBody, NDJSON),
     summary="Fit and select many datasets",
@@ -64,7 +64,10 @@ def post_batch(
     batch: Annotated[PostedBatch, Depends(posted_batch)],
     key: IdempotencyKey = None,
 ) -> Response:
-    """Queue one job for each dataset, all under one plan. A bad dataset is refused by itself; the others are taken."""
+    """Queue one job for each dataset, all under one plan. A bad dataset is refused by itself; the others are taken.
+
+    409 `dataset_purged` if retention has removed points that came with this batch before its jobs were put in.
+    """
     plan = batch.plan or Plan()
     if batch.plan_id is not None:
         plan = plan_named(context.database, batch.plan_id)

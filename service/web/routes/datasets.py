@@ -1,5 +1,6 @@
 """Datasets: posting and reading back."""
 
+import hashlib
 from typing import Annotated, Literal
 
 from fastapi import APIRouter, Depends, Query, Request
@@ -52,7 +53,7 @@ def post_dataset(
 @router.get(
     "/{dataset_id}",
     response_model=DatasetView,
-    responses=documented(401, 403, 404, 422, 429, 503, also=NOT_MODIFIED),
+    responses=documented(401, 403, 404, 409, 422, 429, 503, also=NOT_MODIFIED),
     operation_id="get_dataset",
     summary="Read a dataset",
 )
@@ -63,10 +64,10 @@ def get_dataset(
     dataset_id: Identifier,
     include: Annotated[Literal["points"] | None, Query(description="`points` for the numbers.")] = None,
 ) -> Response:
-    """What is known of a dataset, and its numbers if asked."""
+    """What is known of a dataset, and its numbers if asked: 409 `dataset_purged` once retention has removed those."""
     record, content = read_dataset(context.database, caller, dataset_id, points=include == "points")
-    tag = f"{record.digest}-{include or 'head'}"
-    return conditional(request, tag, json_response(dataset_view(record, content)))
+    answer = json_response(dataset_view(record, content))
+    return conditional(request, hashlib.sha256(answer.body).hexdigest(), answer)  # `created_at` may change
 
 
 @router.get(

@@ -36,7 +36,7 @@ RETRY_AFTER = "1"
     status_code=202,
     response_model=JobView,
     responses=documented(
-        *(400, 401, 403, 413, 415, 422, 429, 503),
+        *(400, 401, 403, 409, 413, 415, 422, 429, 503),
         also={200: {"model": JobView, "description": "Ended within the wait that was asked for"}},
     ),
     operation_id="post_job",
@@ -53,7 +53,8 @@ async def post_job(
 ) -> Response:
     """Queue one fit-and-select of a dataset under a plan.
 
-    With `Prefer: wait=N` (RFC 7240) the answer comes when the job has ended, or after N seconds.
+    With `Prefer: wait=N` (RFC 7240) the answer comes when the job has ended, or after N seconds. 409 `dataset_purged`
+    if retention has removed the points of the dataset named by its id.
     """
     detail, notification = await run_in_threadpool(_submit, context, caller, body, repeat_key(key))
     job_id = request.state.job_id = detail.job.id  # for the log
