@@ -19,8 +19,17 @@ class Waiting:
     oldest: datetime
 
 
+def waiting_in_all(connection: Connection, *, submitted_by: str | None) -> tuple[int, datetime | None]:
+    """How many wait, and when the first of them was put in; of one submitter only, if named."""
+    query = select(func.count(), func.min(jobs.c.queued_at)).where(WAITING)
+    if submitted_by is not None:
+        query = query.where(jobs.c.submitted_by == submitted_by)
+    count, oldest = connection.execute(query).one()
+    return count, oldest
+
+
 def waiting_by_submitter(connection: Connection, *, submitted_by: str | None) -> list[Waiting]:
-    """Most jobs first; of one submitter only, if named."""
+    """Most jobs first, and no more submitters than a page can show; of one submitter only, if named."""
     count = func.count()
     query = (
         select(jobs.c.submitted_by, count.label("jobs"), func.min(jobs.c.queued_at).label("oldest"))

@@ -42,6 +42,7 @@ def create_app(settings: Settings, *, now: Callable[[], datetime] = utc_now) -> 
     async def lifespan(app: FastAPI) -> AsyncIterator[None]:
         database = open_database(settings, durable=True)
         migrate(database)
+        metrics.begin(database)
         transport = open_transport(settings)
         waiting = Waiting(database, tick=settings.wait_tick_seconds)
         drawing = DrawingDesk(database, now=now)

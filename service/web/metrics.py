@@ -1,5 +1,6 @@
 """Prometheus metrics: requests as they are answered; queue, durations and verdicts from the tables when asked for."""
 
+import threading
 import time
 from collections.abc import Callable, Iterator
 from datetime import datetime
@@ -10,7 +11,7 @@ from prometheus_client.registry import Collector
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 from service.store.database import Database
-from service.workflows.gauge import Ended, ended_since, gauge
+from service.workflows.gauge import Ended, ended_since, gauge, last_verdict
 
 SECONDS = (0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1, 2.5, 5, 10, 30, 60, 300, 600)
 
@@ -38,7 +39,12 @@ class Metrics:
             buckets=SECONDS,
             registry=self.registry,
         )
-        self._seen: int | None = None
+        self._seen = 0
+        self._counting = threading.Lock()
+
+    def begin(self, database: Database) -> None:
+        """When the process starts: verdicts from now on are counted, those from before are not."""
+        self._seen = last_verdict(database)
 
     def exposition(self, database: Database, now: Callable[[], datetime]) -> bytes:
         """The text format, with what the tables say now."""
@@ -48,10 +54,11 @@ class Metrics:
         return generate_latest(self.registry) + generate_latest(registry)
 
     def _count(self, database: Database) -> None:
-        """Jobs that ended since the last look; what was there before this process began is not counted."""
-        ended, self._seen = ended_since(database, self._seen)
-        for one in ended:
-            self._add(one)
+        """Jobs that ended since the last look, or since `begin`. Of two who ask at once, one counts."""
+        with self._counting:
+            for one in ended_since(database, self._seen):
+                self._add(one)
+                self._seen = one.sequence
 
     def _add(self, one: Ended) -> None:
         self.verdicts.labels(one.verdict).inc()

@@ -7,7 +7,7 @@ from service.store import gauge as counts
 from service.store.database import Database
 from service.store.gauge import Ended
 
-__all__ = ["Ended", "Gauge", "ended_since", "gauge"]
+__all__ = ["Ended", "Gauge", "ended_since", "gauge", "last_verdict"]
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -28,10 +28,13 @@ def gauge(database: Database, now: datetime) -> Gauge:
     return Gauge(queued=found.queued, running=found.running, oldest_seconds=age, notifications=found.notifications)
 
 
-def ended_since(database: Database, sequence: int | None) -> tuple[list[Ended], int]:
-    """Jobs whose verdicts came after the one numbered `sequence`, and the number of the last; from None: none."""
+def last_verdict(database: Database) -> int:
+    """The number of the newest verdict; 0 if there is none."""
     with database.read() as connection:
-        if sequence is None:
-            return [], counts.last_sequence(connection)
-        ended = counts.ended_after(connection, sequence)
-    return ended, ended[-1].sequence if ended else sequence
+        return counts.last_sequence(connection)
+
+
+def ended_since(database: Database, sequence: int) -> list[Ended]:
+    """Jobs whose verdicts came after the one numbered `sequence`, in order; of very many, the first."""
+    with database.read() as connection:
+        return counts.ended_after(connection, sequence)

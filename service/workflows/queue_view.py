@@ -20,9 +20,11 @@ MOST_RUNNING = 50
 class QueueView:
     """What waits, what runs, and how the last verdicts came. Times in seconds; None where nothing has ended.
 
-    For a `submit` key: its own jobs only, and nothing about the last verdicts.
+    `queued` and `oldest_seconds` are of all who wait, `waiting` names those who have most. For a `submit` key: its own
+    jobs only, and nothing about the last verdicts.
     """
 
+    queued: int
     waiting: tuple[Waiting, ...]
     running: tuple[JobRecord, ...]
     oldest_seconds: float | None
@@ -31,23 +33,19 @@ class QueueView:
     median_run: float | None
     last_at: datetime | None
 
-    @property
-    def queued(self) -> int:
-        """Jobs that wait."""
-        return sum(one.jobs for one in self.waiting)
-
 
 def queue_now(database: Database, caller: Caller, now: datetime) -> QueueView:
     """One look."""
     own = caller.only_own
     with database.read() as connection:
+        queued, oldest = queue_view.waiting_in_all(connection, submitted_by=own)
         waiting = queue_view.waiting_by_submitter(connection, submitted_by=own)
         asked = JobFilter(state=State.RUNNING, submitted_by=own)
         running = jobs.newest(connection, asked, before=None, limit=MOST_RUNNING).items
         last = 0 if own is not None else gauge.last_sequence(connection)
         ended = [] if own is not None else gauge.ended_after(connection, last - LAST)
-    oldest = min((one.oldest for one in waiting), default=None)
     return QueueView(
+        queued=queued,
         waiting=tuple(waiting),
         running=running,
         oldest_seconds=None if oldest is None else max(0.0, (now - oldest).total_seconds()),

@@ -1,5 +1,6 @@
 """What administrators rely on: logs, metrics, readiness, a reference that needs no internet, a graceful stop."""
 
+import contextlib
 import re
 import shutil
 import signal
@@ -15,6 +16,7 @@ from prometheus_client.parser import text_string_to_metric_families
 from service.client import Client
 from service.settings import Settings
 from service.store.tables import State, jobs
+from service.web import metrics as module
 from tests.web.real import make_key, real_service
 from tests.web.service import Service, running
 
@@ -41,7 +43,6 @@ def value(found: dict[Any, float], name: str, **labels: str) -> float:
 
 
 def test_metrics_count_what_happened(service: Service) -> None:
-    metrics(service)  # counts verdicts from now on
     for i in range(3):
         assert service.http.post("/v1/jobs", json={"dataset": DATASET, "subject": f"PT-{i}"}).status_code == 202
     assert service.http.get("/v1/jobs/none").status_code == 404
@@ -66,6 +67,36 @@ def test_metrics_count_what_happened(service: Service) -> None:
         assert value(after, "leastbend_job_seconds_sum", stage=stage) > 0
     assert metrics(service) is not None
     assert value(metrics(service), "leastbend_verdicts_total", verdict="adequate") == 3  # not counted twice
+
+
+def test_what_ended_before_the_process_began_is_not_counted(tmp_path: Path) -> None:
+    settings = Settings(data_dir=tmp_path)
+    for _ in "12":
+        with running(settings) as service:
+            service.http.post("/v1/jobs", json={"dataset": DATASET})
+            assert service.work() == 1
+            assert value(metrics(service), "leastbend_verdicts_total", verdict="adequate") == 1
+
+
+def test_two_who_ask_at_once_count_a_job_once(service: Service, monkeypatch: pytest.MonkeyPatch) -> None:
+    service.http.post("/v1/jobs", json={"dataset": DATASET})
+    assert service.work() == 1
+    both = threading.Barrier(2)
+    whole = module.ended_since
+
+    def together(*words: Any) -> Any:
+        found = whole(*words)
+        with contextlib.suppress(threading.BrokenBarrierError):
+            both.wait(timeout=0.5)  # the other has read the same, unless it may not yet
+        return found
+
+    monkeypatch.setattr(module, "ended_since", together)
+    threads = [threading.Thread(target=service.http.get, args=("/metrics",)) for _ in "12"]
+    for thread in threads:
+        thread.start()
+    for thread in threads:
+        thread.join()
+    assert value(metrics(service), "leastbend_verdicts_total", verdict="adequate") == 1
 
 
 def test_metrics_hold_no_path_that_a_caller_made_up(service: Service) -> None:
