@@ -4,6 +4,7 @@ Rosner's generalised many-outlier procedure (Technometrics 25 (1983) 165), on th
 farthest point again and again, and count back to the last one that stood out when it was taken.
 """
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -64,5 +65,6 @@ def find_outliers(fits: NestedFits, degree: int, *, step: float | None) -> Outli
     moved = value_at(fits.chebyshev(degree), fits.domain, fits.x) - value_at(
         without.chebyshev(degree), without.domain, fits.x
     )
-    shift = float(np.max(np.abs(moved) * np.sqrt(fits.weights))) / sd
+    moved_by = float(np.max(np.abs(moved) * np.sqrt(fits.weights)))
+    shift = moved_by / sd if sd > 0 else math.inf
     return Outliers(points=tuple(taken[: last + 1]), p=p_values[last], shift=shift)

@@ -11,6 +11,7 @@ from service.core.screen import farthest, outlier_p, studentised
 
 OUTLIER = 0.01
 OUTLIER_SERIOUS = 1e-4
+BEYOND = 1e4  # times the scatter: a number would only say that the others hardly scatter
 PULL_SERIOUS = 1.0  # of the standard deviation of a reading: from there on the curve is wrong by more than scatter
 
 
@@ -42,7 +43,8 @@ def suspect_point(found: Findings) -> Warning | None:
         )
     elif pull is not None:
         severity = "caution" if bends else "serious"
-        message += f"; the curve is pulled by up to {pull:.3g} times the scatter of the others. "
+        by = f"by up to {pull:.3g} times the scatter of the others" if pull < BEYOND else "far beyond their scatter"
+        message += f"; the curve is pulled {by}. "
     else:
         message += ". "
     if bends:
