@@ -126,7 +126,8 @@ def test_move_carries_everything_and_the_service_goes_on(data_dir: Path, empty_p
     ("words", "said"),
     [
         (("move", "--to", "mysql://x"), "LEASTBEND_DATABASE_URL"),
-        (("purge", "--older-than", "0"), "at least 1 day"),
+        (("purge", "--older-than", "0"), "must be from 1 to 36500 days"),
+        (("purge", "--older-than", "999999"), "must be from 1 to 36500 days"),
         (("keys", "create", "--name", "", "--role", "read"), "1 to 200"),
         (("backup", "--to", "b.db"), "there is no"),
     ],

@@ -12,6 +12,8 @@ from service.workflows.backup import back_up
 from service.workflows.move import move_installation
 from service.workflows.verify import verify_digests
 
+MOST_DAYS = 36_500  # a century
+
 
 def migrate(asked: dict[str, Any]) -> int:
     """Bring the database to this version's revision."""
@@ -43,8 +45,8 @@ def move(asked: dict[str, Any]) -> int:
 def purge(asked: dict[str, Any]) -> int:
     """Remove points, results and events of what ended long ago; verdicts are kept. Without --remove: only count."""
     days, remove = asked.pop("older_than"), asked.pop("remove")
-    if days < 1:
-        raise InvalidInput.at("/older-than", "must be at least 1 day")
+    if not 1 <= days <= MOST_DAYS:
+        raise InvalidInput.at("/older-than", f"must be from 1 to {MOST_DAYS} days")
     now = utc_now()
     before = now - timedelta(days=days)
     with opened(settings_of(asked)) as database:

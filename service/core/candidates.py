@@ -140,6 +140,7 @@ def _cross_validations(held: HeldOut, tss: float) -> list[CrossValidation]:
     whole = min(used) == folds
     mean, sd = _mean_and_sd(rmse) if whole else (np.empty(0), np.empty(0))
     r2_mean, r2_sd = _r2(held, tss)
+    repeats = int(held.repeat_of[-1]) + 1
     out: list[CrossValidation] = []
     for degree, count in enumerate(used):
         if whole:
@@ -157,10 +158,21 @@ def _cross_validations(held: HeldOut, tss: float) -> list[CrossValidation]:
                 r2_sd=_finite(r2_sd[degree]),
                 folds_used=count,
                 folds=folds,
-                reason=None if count == folds else f"{folds - count} folds leave too few levels for this degree",
+                reason=_cv_reason(folds, folds - count, tss, repeats),
             )
         )
     return out
+
+
+def _cv_reason(folds: int, lost: int, tss: float, repeats: int) -> str | None:
+    """Why some of the numbers are missing, or rest on fewer folds."""
+    if lost:
+        return f"{lost} {'fold leaves' if lost == 1 else 'folds leave'} too few levels for this degree"
+    if tss <= 0:
+        return "R-squared has no value, since y is constant"
+    if folds == 1:
+        return "one fold has no standard deviation"
+    return "one repeat has no standard deviation of R-squared" if repeats == 1 else None
 
 
 def _r2(held: HeldOut, tss: float) -> tuple[Floats, Floats]:

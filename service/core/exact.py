@@ -22,7 +22,7 @@ class ExactFit:
     """The least-squares fit of one degree, each number within one unit in the last place or exact.
 
     power, power_sd: by power 0..degree; None where no double can hold the value (sd also without
-    spare degrees of freedom). t_squared likewise, None for an exact fit. chebyshev: on T_0..T_degree.
+    spare degrees of freedom). t likewise, None for an exact fit. chebyshev: on T_0..T_degree.
     rss_below: by degree, of each lower degree and this one (from 0, or from 1 without intercept).
     """
 
