@@ -10,6 +10,8 @@ from service.store.tables import FINAL, State
 from service.web.context import Context
 from service.web.figures.names import TITLES, FigureName
 from service.web.pages import words
+from service.web.pages.plan_lines import PlanLine, plan_lines
+from service.web.pages.readings import Readings, readings_of
 from service.web.schemas.datasets import dataset_view
 from service.web.schemas.jobs import job_document
 from service.workflows.callers import Caller
@@ -32,7 +34,8 @@ class JobPage:
 
     `verdict`: what GET /v1/jobs/{id}/verdict answers, with its digest; both None before there is one. `dataset`: as
     GET /v1/datasets/{id} answers it without points. `events`: kind, time and detail, oldest first. `elapsed`:
-    seconds since a running job started; `longest`: after which it is stopped.
+    seconds since a running job started; `longest`: after which it is stopped. `plan`: line by line; `readings`: for
+    the report of a job with its result.
     """
 
     job: dict[str, Any]
@@ -45,13 +48,18 @@ class JobPage:
     may_cancel: bool
     elapsed: float | None
     longest: float
+    plan: list[PlanLine]
+    readings: Readings | None
 
 
-def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureName, ...]) -> JobPage:
-    """One job for `caller`, with the figures named. Raises NotFound."""
+def gather(
+    context: Context, caller: Caller, job_id: str, shown: tuple[FigureName, ...], *, readings: bool = True
+) -> JobPage:
+    """One job for `caller`, with the figures named; `readings` may be many to load. Raises NotFound."""
     detail, notification = read_job(context.database, caller, job_id)
     _, happened = read_events(context.database, caller, job_id)
-    record, _ = read_dataset(context.database, caller, detail.job.dataset_id)
+    wanted = readings and detail.result is not None
+    record, content = read_dataset(context.database, caller, detail.job.dataset_id, points=wanted)
     figures: list[FigureItem] = []
     verdict, digest = None, None
     if detail.result is not None:
@@ -63,10 +71,12 @@ def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureNam
         found = read_verdict(context.database, caller, job_id)
         verdict, digest = json.loads(found.document), found.digest
     document = json.loads(job_document(detail, notification))
+    dataset = dataset_view(record)
+    units = {axis: dataset[axis] or "" for axis in ("x_unit", "y_unit")}
     ended = detail.job.state in FINAL
     return JobPage(
         job=document,
-        dataset=dataset_view(record),
+        dataset=dataset,
         verdict=verdict,
         verdict_digest=digest,
         events=[{"kind": one.kind, "at": rfc3339(one.at), "detail": one.detail} for one in happened],
@@ -75,6 +85,8 @@ def gather(context: Context, caller: Caller, job_id: str, shown: tuple[FigureNam
         may_cancel=not ended and caller.role != "read",
         elapsed=_elapsed(context, detail.job),
         longest=context.settings.job_seconds,
+        plan=plan_lines(document["plan"], **units),
+        readings=None if content is None else readings_of(content, dataset, document),
     )
 
 

@@ -27,7 +27,7 @@ IN_REPORT: tuple[FigureName, ...] = ("curve", "degrees", "residuals", "unseen")
 @router.get("/job/{job_id}")
 async def job(request: Request, context: Ctx, visitor: VisitorDep, job_id: str) -> Response:
     """Everything about one job."""
-    page = await run_in_threadpool(gather, context, visitor.caller, job_id, tuple(TITLES))
+    page = await run_in_threadpool(gather, context, visitor.caller, job_id, tuple(TITLES), readings=False)
     return show(request, visitor, "job.html", page)
 
 

@@ -66,8 +66,8 @@ FIGURES: dict[FigureName, str] = {
     "unseen": "What a higher degree, too small for these data to show, could still cause, against what is permitted.",
 }
 CHEBYSHEV = (
-    "y is the sum of c_k T_k(t) over k, with t = (2x - a - b)/(b - a). Use it where x lies far from 0: powers of x "
-    "lose digits there, however exact their coefficients."
+    "y is the sum of c_k T_k(t) over k, with t = ((x\N{MINUS SIGN}a)+(x\N{MINUS SIGN}b))/(b\N{MINUS SIGN}a). "
+    "Use it where x lies far from 0: powers of x lose digits there, however exact their coefficients."
 )
 CAUTIONS = (
     "A statistical check does not replace the laboratory's validated procedure or a qualified person's review.",

@@ -7,7 +7,7 @@ from reportlab.platypus import SimpleDocTemplate
 
 from service.web.pages.gather import JobPage
 from service.web.report import look
-from service.web.report.story import Figures, Writer
+from service.web.report.story import Figures, Report
 
 FOOT = 8.0  # points above the lower edge of the margin box
 
@@ -50,5 +50,5 @@ def _build(page: JobPage, figures: Figures, *, pages: int | None) -> tuple[bytes
         canvas.drawRightString(look.PAPER[0] - look.MARGIN - look.PADDING, height, f"page {number}{of}")
         canvas.restoreState()
 
-    document.build(Writer(page, figures).story(), onFirstPage=foot, onLaterPages=foot)
+    document.build(Report(page, figures).story(), onFirstPage=foot, onLaterPages=foot)
     return out.getvalue(), int(document.page)

@@ -14,6 +14,7 @@ from reportlab.pdfbase.ttfonts import TTFont
 
 PAPER = A4
 MARGIN = 14 * mm
+GAP = 4 * mm
 PADDING = 6  # points, that the layout engine keeps inside its frame
 WIDTH = A4[0] - 2 * MARGIN - 2 * PADDING
 INK, QUIET, RULE, WASH = HexColor("#1d2733"), HexColor("#515c68"), HexColor("#c9c6bc"), HexColor("#eef3f3")

@@ -2,29 +2,27 @@
 
 from io import BytesIO
 from typing import Any
-from xml.sax.saxutils import escape
 
 from reportlab.lib.units import mm
-from reportlab.platypus import CondPageBreak, Image, KeepTogether, Paragraph, Spacer, Table
+from reportlab.platypus import CondPageBreak, Image, KeepTogether, Spacer, Table
 
 from service.web.figures.names import TITLES, FigureName
 from service.web.pages import words
 from service.web.pages.gather import JobPage
-from service.web.pages.numbers import at, rounded, shown
-from service.web.report import look
+from service.web.pages.numbers import at, rounded
+from service.web.report import closing, given, look
+from service.web.report.halves import halved
+from service.web.report.writer import Story, Writer, moment
 
-GAP = 4 * mm
-Story = list[Any]
 Figures = dict[FigureName, bytes]
 
 
-class Writer:
-    """Makes flowables of one job's page."""
+class Report(Writer):
+    """Writes the parts that go with the figures, and puts all parts in order."""
 
     def __init__(self, page: JobPage, figures: Figures) -> None:
-        self.page = page
+        super().__init__(page)
         self.figures = figures
-        self.styles = look.styles()
 
     def story(self) -> Story:
         """The whole report."""
@@ -34,67 +32,31 @@ class Writer:
             self._pair("curve", "degrees"),
             *self._curve(),
             *self._requirements(),
+            *given.plan(self),
+            *given.readings(self),
             CondPageBreak(90 * mm),
             self._pair("residuals", "unseen"),
             *self._unseen(),
             *self._candidates(),
             *self._warnings(),
             *self._checks(),
-            *self._provenance(),
-            *self._cautions(),
+            *closing.provenance(self),
+            *closing.cautions(self),
         ]
 
-    def text(self, words_: str, style: str = "body") -> Any:
-        """A paragraph; whatever came from callers is escaped."""
-        return Paragraph(escape(words_), self.styles[style])
-
-    def number(self, pointer: str, digits: int | None = 4) -> str:
-        """A number of the API's document, rounded for reading; None: with all its digits."""
-        value = at(self.page.job, pointer)
-        return "none" if value is None else shown(value, digits)
-
-    def unit(self, axis: str) -> str:
-        """The unit, with a space before it."""
-        unit = self.page.dataset[f"{axis}_unit"]
-        return f" {unit}" if unit else ""
-
-    def table(self, head: list[str], rows: list[list[str]], shares: list[float], *, right: frozenset[int]) -> Any:
-        """Cells of text; the columns in `right` hold numbers."""
-
-        def cell(column: int, text: str, style: str) -> Any:
-            return self.text(text, f"{style}-right" if column in right else style)
-
-        whole = sum(shares)
-        cells = [[cell(i, text, "head-cell") for i, text in enumerate(head)]]
-        cells += [[cell(i, text, "cell") for i, text in enumerate(row)] for row in rows]
-        return Table(
-            cells,
-            colWidths=[look.WIDTH * share / whole for share in shares],
-            repeatRows=1,
-            style=[
-                ("LINEBELOW", (0, 0), (-1, 0), 0.8, look.QUIET),
-                ("LINEBELOW", (0, 1), (-1, -1), 0.3, look.RULE),
-                ("VALIGN", (0, 0), (-1, -1), "TOP"),
-                ("LEFTPADDING", (0, 0), (-1, -1), 2),
-                ("RIGHTPADDING", (0, 0), (-1, -1), 3),
-                ("TOPPADDING", (0, 0), (-1, -1), 1),
-                ("BOTTOMPADDING", (0, 0), (-1, -1), 1.5),
-            ],
-        )
-
     def _top(self) -> Story:
-        data, verdict = self.page.dataset, self._signed()
+        data, verdict = self.page.dataset, self.signed
         lo, hi = data["summary"]["x_range"]
         said = [f"{data['title']}. " if data["title"] else ""]
         said += [f"{data['summary']['points']} points at {data['summary']['levels']} levels, "]
         said += [f"{data['x_quantity'] or 'x'} from {rounded(lo, 7)} to {rounded(hi, 7)}{self.unit('x')}"]
-        said += [f", measured {_moment(data['measured_at'])}. " if data["measured_at"] else ". "]
-        said += [f"Verdict issued {_moment(verdict['issued_at'])} by Leastbend {verdict['service_version']}"]
+        said += [f", measured {moment(data['measured_at'])}. " if data["measured_at"] else ". "]
+        said += [f"Verdict issued {moment(verdict['issued_at'])} by Leastbend {verdict['service_version']}"]
         said += [f"; submitted by {self.page.job['submitted_by']}; job {self.page.job['id']}."]
         return [self.text(f"Calibration curve of {verdict['subject']}", "title"), self.text("".join(said), "under")]
 
     def _verdict(self) -> Story:
-        verdict = self._signed()
+        verdict = self.signed
         word, colour = verdict["verdict"], look.VERDICTS[verdict["verdict"]]
         lines = [
             self.text(f"{word.capitalize()}: {words.degree_name(verdict['chosen_degree'])}", "verdict"),
@@ -109,10 +71,10 @@ class Writer:
             ("TOPPADDING", (0, 0), (-1, -1), 1),
             ("BOTTOMPADDING", (0, 0), (-1, -1), 1),
         ]
-        return [Table([[line] for line in lines], colWidths=[look.WIDTH], style=style), Spacer(1, GAP)]
+        return [Table([[line] for line in lines], colWidths=[look.WIDTH], style=style), Spacer(1, look.GAP)]
 
     def _pair(self, *names: FigureName) -> Any:
-        width = (look.WIDTH - GAP) / 2
+        width = (look.WIDTH - look.GAP) / 2
         pictures, captions = [], []
         for name in names:
             picture = Image(BytesIO(self.figures[name]))
@@ -123,11 +85,11 @@ class Writer:
         style = [
             ("VALIGN", (0, 0), (-1, -1), "TOP"),
             ("LEFTPADDING", (0, 0), (-1, -1), 0),
-            ("RIGHTPADDING", (0, 0), (0, -1), GAP),
+            ("RIGHTPADDING", (0, 0), (0, -1), look.GAP),
             ("RIGHTPADDING", (1, 0), (1, -1), 0),
             ("TOPPADDING", (0, 0), (-1, -1), 1),
         ]
-        return KeepTogether([Table([pictures, captions], colWidths=[width + GAP, width], style=style)])
+        return KeepTogether([Table([pictures, captions], colWidths=[width + look.GAP, width], style=style)])
 
     def _curve(self) -> Story:
         power = at(self.page.job, "/result/curve/power/coefficients")
@@ -188,7 +150,7 @@ class Writer:
 
     def _warnings(self) -> Story:
         found = at(self.page.job, "/result/warnings")
-        reasons = {one["message"] for one in self._signed()["reasons"]}
+        reasons = {one["message"] for one in self.signed["reasons"]}
         lines = [
             self.text(f"{one['severity'].capitalize()}, {words.plain(one['code'])}: {one['message']}")
             for one in found
@@ -212,55 +174,9 @@ class Writer:
         ]
         if not rows:
             return []
-        table = self.table(["Check", "Statistic", "p"], rows, [5, 1, 1], right=frozenset({1, 2}))
+        table = halved(self, ["Check", "Statistic", "p"], rows, right=frozenset({1, 2}))
         return [KeepTogether([self.text("Checks", "head"), table])]
-
-    def _provenance(self) -> Story:
-        verdict, origin = self._signed(), at(self.page.job, "/result/provenance")
-        rows = [
-            ("Dataset", verdict["dataset_digest"]),
-            ("Plan", verdict["plan_digest"]),
-            ("Result", verdict["result_digest"]),
-            ("Verdict", str(self.page.verdict_digest)),
-            ("Verdict before", verdict["previous"] or "none: the first"),
-        ]
-        table = Table(
-            [[self.text(name, "cell"), self.text(digest, "mono")] for name, digest in rows],
-            colWidths=[look.WIDTH * 0.2, look.WIDTH * 0.8],
-            style=[("TOPPADDING", (0, 0), (-1, -1), 0.5), ("BOTTOMPADDING", (0, 0), (-1, -1), 0.5)],
-        )
-        versions = ", ".join(f"{name} {version}" for name, version in origin["versions"].items())
-        said = (
-            f"Computed by {versions} on {origin['platform']}, worker {origin['worker']}, attempt {origin['attempt']}; "
-            f"queued {_moment(origin['queued_at'])}, finished {_moment(origin['finished_at'])}; seed {origin['seed']}."
-        )
-        return [
-            KeepTogether([self.text("Digests (SHA-256) and provenance", "head"), table, self.text(said, "caution")])
-        ]
-
-    def _cautions(self) -> Story:
-        lines = [self.text(line, "caution") for line in words.CAUTIONS]
-        review = Table(
-            [[self.text("Reviewed by", "caution"), "", self.text("Date", "caution"), ""]],
-            colWidths=[look.WIDTH * share for share in (0.12, 0.48, 0.08, 0.32)],
-            rowHeights=[9 * mm],
-            style=[
-                ("LINEBELOW", (1, 0), (1, 0), 0.5, look.QUIET),
-                ("LINEBELOW", (3, 0), (3, 0), 0.5, look.QUIET),
-                ("VALIGN", (0, 0), (-1, -1), "BOTTOM"),
-                ("LEFTPADDING", (0, 0), (0, -1), 0),
-            ],
-        )
-        return [KeepTogether([self.text("Cautions", "head"), *lines, review])]
-
-    def _signed(self) -> dict[str, Any]:
-        assert self.page.verdict is not None
-        return self.page.verdict
 
 
 COLUMNS = (("standard_errors", 4), ("t", 4), ("p", 2))
 CANDIDATE = (("cv/rmse_mean", 4), ("cv/rmse_sd", 2), ("residual_sd", 4), ("r2", 7), ("step/p", 2))
-
-
-def _moment(text: str) -> str:
-    return f"{text[:10]} {text[11:19]} UTC"

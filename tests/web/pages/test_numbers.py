@@ -27,13 +27,13 @@ def test_job_and_report(service: Service, case: str):
     job = service.http.post("/v1/jobs", json={"dataset": dataset, "plan": plan}).json()["id"]
     service.work()
     answer = service.http.get(f"/v1/jobs/{job}").json()
-    stored = service.http.get(f"/v1/datasets/{answer['dataset_id']}").json()
+    stored = service.http.get(f"/v1/datasets/{answer['dataset_id']}?include=points").json()
     for address, least in ((f"/job/{job}", 60), (f"/job/{job}/report", 30)):
         page = service.http.get(address)
         assert page.status_code == 200
-        of_dataset = [one for one in numbers(page.text) if one[0].startswith("/summary")]
+        of_dataset = [one for one in numbers(page.text) if one[0].startswith(("/summary", "/points"))]
         assert len(of_dataset) >= 4
-        assert holds(page.text, stored, of="/summary") == len(of_dataset)
+        assert holds(page.text, stored, of="/summary") + holds(page.text, stored, of="/points") == len(of_dataset)
         of_job = sum(holds(page.text, answer, of=of) for of in ("/result", "/plan", "/attempts", "/priority"))
         assert of_job == len(list(numbers(page.text))) - len(of_dataset)
         assert of_job >= least
