@@ -1,4 +1,4 @@
-"""What happened to a job, in order; never changed afterwards."""
+"""What happened to a job, in order; never changed afterwards, removed only by retention."""
 
 import json
 from collections.abc import Sequence
@@ -14,7 +14,10 @@ ADD = insert(job_events)
 
 
 def add(connection: Connection, job_id: str, kind: str, now: datetime, **detail: Any) -> None:
-    """One event: `queued`, `started`, `requeued`, `succeeded`, `failed` or `cancelled`, with what is known of it."""
+    """One event: `queued`, `started`, `requeued`, `succeeded`, `failed` or `cancelled`, with what is known of it.
+
+    Retention puts `purged` in the place of all that it removes.
+    """
     connection.execute(ADD, {"job_id": job_id, "at": now, "kind": kind, "detail": json.dumps(detail)})
 
 

@@ -12,7 +12,7 @@ from pydantic import ValidationError
 from starlette.concurrency import run_in_threadpool
 
 from service.errors import FieldError, InvalidInput, MalformedInput, TooLarge
-from service.web.schemas.common import Body
+from service.web.schemas.common import WORDS_OF_PATTERNS, Body
 
 B = TypeVar("B", bound=Body)
 
@@ -145,11 +145,13 @@ def _words(error: Any) -> str:
         "model_attributes_type": "must be an object",
         "string_type": "must be text",
         "string_unicode": "must be valid Unicode",
-        "string_pattern_mismatch": "must not hold control characters",
     }
     kind = error["type"]
     if kind in known:
         return known[kind]
+    if kind == "string_pattern_mismatch":
+        pattern = error["ctx"]["pattern"]
+        return WORDS_OF_PATTERNS.get(pattern, f"must match {pattern}")
     if kind == "too_short":
         return f"needs at least {error['ctx']['min_length']} items, has {error['ctx']['actual_length']}"
     message = str(error["msg"]).removeprefix("Value error, ")

@@ -142,6 +142,8 @@ def demand_labels(labels: Sequence[Any]) -> None:
         if not (isinstance(label, str) and 0 < len(label) <= LONGEST_LABEL and label.isprintable()):
             message = f"must be text of 1 to {LONGEST_LABEL} printable characters"
             raise InvalidInput.at(f"/series/{number}", message)
+        if not label.strip():
+            raise InvalidInput.at(f"/series/{number}", "must hold a visible character")
 
 
 def content_of(

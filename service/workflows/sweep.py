@@ -70,7 +70,7 @@ def _settle(connection: Connection, settings: Settings, held: Held, now: datetim
         _give_up(connection, held, now, "timed_out", message)
         return "timed_out"
     if held.attempts >= settings.max_attempts:
-        message = f"its worker was lost in each of {held.attempts} attempts"
+        message = f"its worker was lost in attempt {held.attempts}, the last that it gets"
         _give_up(connection, held, now, "worker_lost", message)
         return "given_up"
     # Losing a worker is seldom the job's fault: the first time it waits for nothing.

@@ -8,6 +8,7 @@ from pydantic import ValidationError
 from service.core.plan import Plan
 from service.errors import InvalidInput, MalformedInput
 from service.web.schemas.datasets import DatasetBody
+from service.web.schemas.jobs import JobBody
 from service.web.schemas.plans import PlanBody
 from service.web.strict_json import parse_json, read_value
 from tests.web.service import Service
@@ -36,6 +37,10 @@ DATASETS = [
     (dataset(u_y=[1, 1, -1, 1, 1]), "/u_y/2"),
     (dataset(subject=""), "/subject"),
     (dataset(subject=3), "/subject"),
+    (dataset(subject="  "), "/subject"),
+    (dataset(subject="\u00a0\u3000"), "/subject"),
+    (dataset(series=["a", "a", " ", "b", "b"]), "/series/2"),
+    (dataset(tags={" ": "a"}), "/tags/ "),
     (dataset(subject="a\x00b"), "/subject"),
     (dataset(level_tolerance=-1), "/level_tolerance"),
     (dataset(measured_at="yesterday"), "/measured_at"),
@@ -86,6 +91,8 @@ JOBS = [
     ({"dataset": dataset(u_x=[1, 1, 1, 1, 1])}, "/dataset/u_x"),
     ({"dataset": GOOD, "priority": 1000}, "/priority"),
     ({"dataset": GOOD, "subject": ""}, "/subject"),
+    ({"dataset": GOOD, "subject": " "}, "/subject"),
+    ({"dataset": GOOD, "notify_url": "not a url"}, "/notify_url"),
 ]
 RAW = [
     (b"", 400),
@@ -169,6 +176,31 @@ def test_unknown_paths_and_methods_are_problems(service: Service) -> None:
 def test_the_plan_as_posted_has_the_defaults_of_the_core() -> None:
     assert PlanBody().plan("/plan") == Plan()
     assert PlanBody.model_validate({}).model_dump() == PlanBody().model_dump()
+
+
+@pytest.mark.parametrize(
+    ("value", "pointer", "message"),
+    [
+        ({"dataset": GOOD, "subject": " "}, "/subject", "must hold a visible character, and no control characters"),
+        ({"dataset": GOOD | {"title": "a\x01"}}, "/dataset/title", "must not hold control characters"),
+        (
+            {"dataset": GOOD, "notify_url": "not a url"},
+            "/notify_url",
+            "must be an address without spaces, in printable",
+        ),
+    ],
+)
+def test_a_pattern_is_told_in_words(value: Any, pointer: str, message: str) -> None:
+    with pytest.raises(InvalidInput) as raised:
+        read_value(JobBody, value)
+    ((found, words),) = [(one.pointer, one.message) for one in raised.value.errors]
+    assert found == pointer
+    assert words.startswith(message)
+
+
+def test_names_may_hold_spaces_and_any_script(service: Service) -> None:
+    for subject in ("a b", " a ", "\u6e29\u5ea6\u8a08 1", "\u00b0"):
+        assert service.http.post("/v1/datasets", json=dataset(subject=subject)).status_code == 201
 
 
 def errors_of(value: Any) -> tuple[list[tuple[str, str]], int]:

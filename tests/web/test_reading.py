@@ -66,6 +66,22 @@ def test_a_datasets_tag_changes_with_its_document(service: Service) -> None:
         assert new.headers["etag"] != old.headers["etag"]
 
 
+def test_what_retention_causes_stands_in_the_document(service: Service) -> None:
+    job = post(service)
+    service.work()
+    later = service.context.now() + timedelta(seconds=1)
+    assert purge(service.database, before=later, now=later, dry_run=False).jobs == 1
+    stream = service.http.get(f"/v1/jobs/{job}/events")
+    events = [line.removeprefix("event: ") for line in stream.text.splitlines() if line.startswith("event: ")]
+    assert events == ["purged"]
+    paths = service.http.get("/openapi.json").json()["paths"]
+    streamed = paths["/v1/jobs/{job_id}/events"]["get"]["responses"]["200"]["content"]["text/event-stream"]["schema"]
+    assert "purged" in streamed["properties"]["event"]["enum"]
+    for path, method in (("/v1/datasets/{dataset_id}", "get"), ("/v1/jobs", "post"), ("/v1/batches", "post")):
+        assert "409" in paths[path][method]["responses"]
+        assert "dataset_purged" in paths[path][method]["description"]
+
+
 def test_a_jobs_tag_changes_with_it(service: Service) -> None:
     job = post(service)
     waiting = service.http.get(f"/v1/jobs/{job}").headers["etag"]

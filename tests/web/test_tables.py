@@ -198,6 +198,7 @@ def test_parquet_of_many_batches() -> None:
         ({"x": [1, 2, 3], "y": [1, 2, 3], "series": [1, 2, 3]}, "/series"),
         ({"x": [1, 2, 3], "y": [1, 2, 3], "series": ["a", None, "b"]}, "/series/1"),
         ({"x": [1, 2, 3], "y": [1, 2, 3], "series": ["a", "", "b"]}, "/series/1"),
+        ({"x": [1, 2, 3], "y": [1, 2, 3], "series": ["a", " ", "b"]}, "/series/1"),
         ({"x": [1, 2, 3], "y": [1, 2, 3], "series": ["a", "\n", "b"]}, "/series/1"),
     ],
 )

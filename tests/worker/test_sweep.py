@@ -115,7 +115,11 @@ def test_a_job_that_keeps_killing_its_worker_is_failed_in_the_end(desk: Desk) ->
     assert outcome == Swept(given_up=1)
     job = desk.job(job_id)
     assert (job.state, job.attempts) == (State.FAILED, desk.settings.max_attempts)
-    assert json.loads(job.error or "")["code"] == "worker_lost"
+    error = json.loads(job.error or "")
+    assert error["code"] == "worker_lost"
+    assert (
+        error["message"] == "its worker was lost in attempt 5, the last that it gets"
+    )  # of earlier ones it says nothing
     assert desk.history(job_id) == ["queued", *["started", "requeued"] * 4, "started", "failed"]
 
 

@@ -24,7 +24,7 @@ EVENT = {
     "properties": {
         "event": {
             "type": "string",
-            "enum": ["queued", "started", "requeued", "succeeded", "failed", "cancelled", "progress"],
+            "enum": ["queued", "started", "requeued", "succeeded", "failed", "cancelled", "purged", "progress"],
         },
         "id": {"type": "string", "description": "Send it as Last-Event-ID to go on behind it; `progress` has none."},
         "data": {"type": "string", "contentMediaType": "application/json"},
@@ -63,7 +63,8 @@ async def get_job_events(
     ] = 0,
 ) -> AsyncIterator[ServerSentEvent]:
     """Server-sent events: `queued`, `started`, `requeued`, `succeeded`, `failed`, `cancelled` as they are recorded,
-    each with an id to go on from, and `progress` in between. The stream ends with the job.
+    each with an id to go on from, and `progress` in between. The stream ends with the job. Of an old job whose events
+    retention has removed there is `purged` alone.
     """
     seen = last_event_id
     async with context.waiting.watching(job_id) as changes:

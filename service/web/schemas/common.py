@@ -22,6 +22,17 @@ T = TypeVar("T")
 MOST_UNKNOWN = 20  # keys of one object
 NO_CONTROLS = r"^[^\x00-\x1f\x7f]*$"  # PostgreSQL text holds no NUL; logs and pages want no other controls either
 
+# A name of spaces alone names nothing.
+VISIBLE = r"^[^\x00-\x1f\x7f]*[^\x00-\x20\x7f\u00a0\u2000-\u200b\u3000][^\x00-\x1f\x7f]*$"
+NO_SPACES = r"^[\x21-\x7e]+$"
+IDENTIFIER = r"^[0-9A-Za-z-]{1,64}$"
+WORDS_OF_PATTERNS = {
+    NO_CONTROLS: "must not hold control characters",
+    VISIBLE: "must hold a visible character, and no control characters",
+    NO_SPACES: "must be an address without spaces, in printable ASCII characters",
+    IDENTIFIER: "must be 1 to 64 letters, digits and hyphens",
+}
+
 
 def _whole(value: Any) -> Any:
     """3.0 is a whole number to JSON Schema, and to languages that know one kind of number."""
@@ -30,9 +41,9 @@ def _whole(value: Any) -> Any:
 
 WHOLE = BeforeValidator(_whole)
 Whole = Annotated[int, WHOLE]
-Identifier = Annotated[str, Path(pattern=r"^[0-9A-Za-z-]{1,64}$", description="As answered when it was made.")]
+Identifier = Annotated[str, Path(pattern=IDENTIFIER, description="As answered when it was made.")]
 Finite = Annotated[float, Field(allow_inf_nan=False)]
-Label = Annotated[str, Field(min_length=1, max_length=200, pattern=NO_CONTROLS)]
+Label = Annotated[str, Field(min_length=1, max_length=200, pattern=VISIBLE)]
 Line = Annotated[str, Field(max_length=500, pattern=NO_CONTROLS)]
 
 

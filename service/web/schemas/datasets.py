@@ -8,7 +8,7 @@ from pydantic import BeforeValidator, Field, WithJsonSchema
 
 from service.store.clock import rfc3339
 from service.store.records import DatasetContent, DatasetRecord
-from service.web.schemas.common import NO_CONTROLS, Answer, Body, Finite, Label, Line, Moment, given
+from service.web.schemas.common import NO_CONTROLS, VISIBLE, Answer, Body, Finite, Label, Line, Moment, given
 
 MOST_TAGS = 50
 # Of each column the first wrong item is named: half a million errors, of which few are shown, would fill the memory.
@@ -30,7 +30,7 @@ Tags = Annotated[
         {
             "type": "object",
             "maxProperties": MOST_TAGS,
-            "propertyNames": {"type": "string", "minLength": 1, "maxLength": 200, "pattern": NO_CONTROLS},
+            "propertyNames": {"type": "string", "minLength": 1, "maxLength": 200, "pattern": VISIBLE},
             "additionalProperties": {"type": "string", "maxLength": 500, "pattern": NO_CONTROLS},
         }
     ),

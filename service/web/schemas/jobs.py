@@ -10,7 +10,7 @@ from service.core.plan import Plan
 from service.core.result import Reason
 from service.store.clock import rfc3339
 from service.store.records import JobDetail, JobRecord, NotificationRecord
-from service.web.schemas.common import WHOLE, Answer, Body, FieldProblem, Label
+from service.web.schemas.common import NO_SPACES, WHOLE, Answer, Body, FieldProblem, Label
 from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.plans import PlanBody
 from service.web.schemas.results import JobResult
@@ -29,7 +29,7 @@ class JobBody(Body):
     plan_id: Label | None = Field(None, description="One version of a named plan.")
     subject: Label | None = Field(None, description="Absent: the dataset's.")
     priority: Priority = Field(0, description="Higher runs first.")
-    notify_url: Annotated[str, Field(max_length=2000, pattern=r"^[\x21-\x7e]+$")] | None = Field(
+    notify_url: Annotated[str, Field(max_length=2000, pattern=NO_SPACES)] | None = Field(
         None, description="Told of the job's end by a POST signed after the Standard Webhooks specification."
     )
 

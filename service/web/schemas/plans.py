@@ -73,7 +73,12 @@ class PlanBody(Body):
     working_range: Annotated[list[Finite], Field(min_length=2, max_length=2)] | None = Field(
         None, description="[low, high] in `x_unit`; null: the range of the data."
     )
-    confidence: Finite = Field(0.95, ge=0.5, lt=1, description="Of coverage intervals.")
+    confidence: Finite = Field(
+        0.95,
+        ge=0.5,
+        lt=1,
+        description="Of coverage intervals, and of the bound on the unseen bend: there at least 0.95.",
+    )
     known_uncertainty: bool = Field(False, description="Take u_y as absolute: z-tests instead of F-tests.")
     requirements: RequirementsBody = Field(default_factory=lambda: RequirementsBody())
 
