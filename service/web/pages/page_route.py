@@ -11,7 +11,8 @@ from fastapi.routing import APIRoute
 from starlette.exceptions import HTTPException
 from starlette.responses import RedirectResponse
 
-from service.errors import FieldError, InvalidInput, LeastbendError, Overloaded, Unauthenticated
+from service.errors import InvalidInput, LeastbendError, Overloaded, Unauthenticated
+from service.web.pages.labels import sentences
 from service.web.pages.render import render
 from service.web.problems import STATUS
 from service.web.strict_json import field_errors
@@ -29,11 +30,11 @@ ADVICE = {
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class ErrorPage:
-    """error.html. `title`: what went wrong in a few words; `errors`: the fields, if it was input."""
+    """error.html. `title`: what went wrong in a few words; `errors`: the fields in words, if it was input."""
 
     title: str
     message: str
-    errors: tuple[FieldError, ...]
+    errors: tuple[str, ...]
     advice: str
     code: str
 
@@ -68,7 +69,7 @@ def error_page(error: LeastbendError) -> Response:
     page = ErrorPage(
         title=titles.get(status, "That did not work"),
         message=error.message,
-        errors=error.errors if isinstance(error, InvalidInput) else (),
+        errors=sentences(error) if isinstance(error, InvalidInput) else (),
         advice=ADVICE.get(status, ""),
         code=error.code,
     )

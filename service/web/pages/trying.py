@@ -8,17 +8,17 @@ from starlette.concurrency import run_in_threadpool
 from starlette.responses import RedirectResponse, Response
 
 from service.core.plan import Plan, Weights
-from service.errors import FieldError, InvalidInput, TooLarge
+from service.errors import InvalidInput, TooLarge
 from service.store.records import DatasetContent
 from service.web.context import Context, Ctx
+from service.web.pages.labels import Labeller, field_label, named_by, sentences
 from service.web.pages.page_route import PageRoute
+from service.web.pages.pasted import is_json, json_label, read_json, read_table, table_of
 from service.web.pages.show import show
 from service.web.pages.visitors import VisitorDep, read_form
 from service.web.schemas.common import Body, Finite, Label, Line
-from service.web.schemas.datasets import DatasetBody
 from service.web.schemas.plans import MaxPermissibleErrorBody, PlanBody, RequirementsBody
-from service.web.strict_json import read_as, read_value
-from service.web.tables import read_csv
+from service.web.strict_json import read_value
 from service.workflows.callers import Caller
 from service.workflows.plans import list_plans
 from service.workflows.submit import Submission, submit_job
@@ -62,10 +62,10 @@ class TryBody(Body):
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class TryPage:
-    """try.html. `given`: what the form shows, by field; `errors`: what was wrong with it; `plans`: named plans."""
+    """try.html. `given`: what the form shows, by field; `errors`: what was wrong with it, in words; `plans`: named."""
 
     given: dict[str, str]
-    errors: tuple[FieldError, ...] = ()
+    errors: tuple[str, ...] = ()
     plans: list[tuple[str, str]] = field(default_factory=list)
     example: str = EXAMPLE
 
@@ -82,55 +82,49 @@ async def post(request: Request, context: Ctx, visitor: VisitorDep) -> Response:
     """Queue one job, and go to it; or the form again with what to mend."""
     sent = await read_form(request, visitor.secret)
     given = {name: str(sent.get(name) or "").strip() for name in FIELDS}
+    given["table"] = str(sent.get("table") or "")  # as it was pasted: mistakes are named by its lines
     try:
         file = sent.get("file")
         body = file if isinstance(file, bytes) else given["table"].encode()
         job_id = await run_in_threadpool(_submit, context, visitor.caller, given, body)
     except (InvalidInput, TooLarge) as error:
-        errors = error.errors if isinstance(error, InvalidInput) else (FieldError("", error.message),)
+        errors = sentences(error) if isinstance(error, InvalidInput) else (error.message,)
         page = TryPage(given=_shown(given), errors=errors, plans=await run_in_threadpool(_plans, context))
         return show(request, visitor, "try.html", page, status=422)
     return RedirectResponse(f"/job/{job_id}", status_code=303)
 
 
 def _submit(context: Context, caller: Caller, given: dict[str, str], body: bytes) -> str:
-    said = read_value(TryBody, {name: value for name, value in given.items() if value and name != "table"})
-    submission = Submission(
-        dataset=_content(said, body),
-        plan=None if said.plan_id else _plan(said),
-        plan_id=said.plan_id,
-    )
-    detail, _ = submit_job(
-        context.database,
-        context.transport,
-        context.settings,
-        caller,
-        submission,
-        repeat_key=None,
-        now=context.now(),
-    )
+    """Id of the new job. Raises InvalidInput that names every field in words, TooLarge."""
+    with named_by(field_label):
+        said = read_value(TryBody, {name: value for name, value in given.items() if value and name != "table"})
+        if not body.strip():
+            raise InvalidInput.at("/table", "is empty: paste a table with the columns x and y, or choose a file")
+    content, place = _content(said, body)
+    with named_by(lambda pointer: place(pointer) if pointer.startswith("/dataset/") else field_label(pointer)):
+        submission = Submission(dataset=content, plan=None if said.plan_id else _plan(said), plan_id=said.plan_id)
+        detail, _ = submit_job(
+            context.database,
+            context.transport,
+            context.settings,
+            caller,
+            submission,
+            repeat_key=None,
+            now=context.now(),
+        )
     return detail.job.id
 
 
-def _content(said: TryBody, body: bytes) -> DatasetContent:
-    if not body.strip():
-        raise InvalidInput.at("/table", "is empty: paste a table with the columns x and y, or choose a file")
-    if body.lstrip()[:1] == b"{":
-        return read_as(DatasetBody, body).content()
-    if said.subject is None:
-        raise InvalidInput.at("/subject", "is missing: name the instrument or method that this calibrates")
-    details = {name: getattr(said, name) for name in SAID if getattr(said, name) is not None}
-    return read_csv(as_csv(body), subject=said.subject, details=details)
-
-
-def as_csv(body: bytes) -> bytes:
-    """What spreadsheets put on the clipboard (tabs, perhaps no header) as CSV with a header."""
-    lines = body.replace(b"\r\n", b"\n").replace(b"\r", b"\n").strip().replace(b"\t", b";")
-    first = lines.split(b"\n", 1)[0]
-    if any(byte in b"xXyY" for byte in first):
-        return lines + b"\n"
-    separator = b";" if b";" in first else b","
-    return b"x" + separator + b"y\n" + lines + b"\n"
+def _content(said: TryBody, body: bytes) -> tuple[DatasetContent, Labeller]:
+    """The dataset, and how its places are named to who pasted it."""
+    typed = {name: getattr(said, name) for name in ("subject", *SAID) if getattr(said, name) is not None}
+    if is_json(body):
+        return read_json(body, typed), json_label
+    with named_by(field_label):
+        if said.subject is None:
+            raise InvalidInput.at("/subject", "is missing: name the instrument or method that this calibrates")
+    table, subject = table_of(body), typed.pop("subject")
+    return read_table(table, subject=subject, details=typed), table.label
 
 
 def _plan(said: TryBody) -> Plan:
