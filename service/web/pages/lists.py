@@ -8,7 +8,8 @@ from fastapi import APIRouter, Query, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
-from service.web.context import Ctx
+from service.store.named_plans import NamedPlan
+from service.web.context import Context, Ctx
 from service.web.pages.page_route import PageRoute
 from service.web.pages.show import show
 from service.web.pages.visitors import VisitorDep
@@ -23,6 +24,7 @@ from service.workflows.queue_view import QueueView, batch_items, queue_now
 router = APIRouter(route_class=PageRoute, include_in_schema=False)
 PAGE = 50
 ITEMS = 200
+PLANS_ASKED, PLANS_SHOWN = 1000, 3
 CursorText = Annotated[str | None, Query(max_length=100)]
 
 
@@ -50,9 +52,11 @@ class BatchesPage:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class BatchPage:
-    """batch.html. `items`: one line each from position `first` on, without results; `following`: address of more."""
+    """batch.html. `items`: one line each from position `first` on, without results; `following`: address of more;
+    `plans`: the named plans that are the batch's."""
 
     batch: dict[str, Any]
+    plans: list[NamedPlan]
     items: list[dict[str, Any]]
     first: int
     following: str | None
@@ -141,6 +145,7 @@ async def batch(
         more = first + ITEMS < found["size"]
         return BatchPage(
             batch=found,
+            plans=_plans_like(context, found["plan_digest"]),
             items=items,
             first=first,
             following=f"/batch/{batch_id}?first={first + ITEMS}" if more else None,
@@ -148,6 +153,12 @@ async def batch(
         )
 
     return show(request, visitor, "batch.html", await run_in_threadpool(gather))
+
+
+def _plans_like(context: Context, plan_digest: str) -> list[NamedPlan]:
+    """A batch keeps the digest of its plan, not whether it was named by an id: equal plans are one plan."""
+    newest = list_plans(context.database, name=None, latest_only=False, before=None, limit=PLANS_ASKED)
+    return [one for one in newest.items if one.plan_digest == plan_digest][:PLANS_SHOWN]
 
 
 @router.get("/plans")

@@ -14,6 +14,7 @@ from starlette.responses import RedirectResponse
 from service.errors import InvalidInput, LeastbendError, Overloaded, Unauthenticated
 from service.web.pages.labels import sentences
 from service.web.pages.render import render
+from service.web.pages.visitors import visitor_of
 from service.web.problems import STATUS
 from service.web.strict_json import field_errors
 
@@ -53,17 +54,17 @@ class PageRoute(APIRoute):
                 back = request.url.path + (f"?{request.url.query}" if request.url.query else "")
                 return RedirectResponse(f"/sign-in?next={quote(back, safe='')}", status_code=303)
             except LeastbendError as error:
-                return error_page(error)
+                return error_page(request, error)
             except RequestValidationError as error:
-                return error_page(InvalidInput(field_errors(error.errors())))
+                return error_page(request, InvalidInput(field_errors(error.errors())))
             except HTTPException as error:  # a form that cannot be read
-                return error_page(InvalidInput.at("", str(error.detail)))
+                return error_page(request, InvalidInput.at("", str(error.detail)))
 
         return handle
 
 
-def error_page(error: LeastbendError) -> Response:
-    """What the error says, and what to do."""
+def error_page(request: Request, error: LeastbendError) -> Response:
+    """What the error says, and what to do, with the way to the other pages for who may see them."""
     status = next(status for kind, status in STATUS if isinstance(error, kind))
     titles = {403: "Not allowed", 404: "Not found", 413: "Too large", 429: "Too many requests", 503: "Not now"}
     page = ErrorPage(
@@ -74,4 +75,6 @@ def error_page(error: LeastbendError) -> Response:
         code=error.code,
     )
     headers = {"Retry-After": str(error.retry_after)} if isinstance(error, Overloaded) else None
-    return render("error.html", page, caller=None, status=status, headers=headers)
+    visitor = visitor_of(request)
+    caller, token = (None, "") if visitor is None else (visitor.caller, visitor.form_token)
+    return render("error.html", page, caller=caller, form_token=token, status=status, headers=headers)

@@ -32,6 +32,7 @@ def environment() -> Environment:
         "seconds": numbers.seconds,
         "rounded": numbers.rounded,
         "plain": words.plain,
+        "visible": words.visible,
         "degree_name": words.degree_name,
     }
     made.globals |= {"number": numbers.number, "words": words}

@@ -50,11 +50,18 @@ def _visitor(request: Request, context: Ctx) -> Visitor:
     caller = visitor(context.database, token, now=context.now())
     if caller.open:
         demand_loopback(request)
+    secret = request.cookies.get(FORM, "") if caller.open or token is None else token
+    known = Visitor(caller=caller, secret=secret)
+    request.state.visitor = known  # the page of an error is for somebody, too
     wait = context.rates.take(caller.name)
     if wait:
         raise RateLimited(f"more than {context.rates.per_minute} requests a minute", retry_after=wait)
-    secret = request.cookies.get(FORM, "") if caller.open or token is None else token
-    return Visitor(caller=caller, secret=secret)
+    return known
+
+
+def visitor_of(request: Request) -> Visitor | None:
+    """Who looks, if that was found out before an error came."""
+    return getattr(request.state, "visitor", None)
 
 
 VisitorDep = Annotated[Visitor, Depends(_visitor)]

@@ -65,6 +65,8 @@ FIGURES: dict[FigureName, str] = {
     "leverage": "Points beyond the lines of Cook's distance move the whole curve.",
     "unseen": "What a higher degree, too small for these data to show, could still cause, against what is permitted.",
 }
+BLANK = "\u115f\u1160\u2800\u3164\uffa0"
+"""Characters that count as printable and show nothing."""
 CHEBYSHEV = (
     "y is the sum of c_k T_k(t) over k, with t = ((x\N{MINUS SIGN}a)+(x\N{MINUS SIGN}b))/(b\N{MINUS SIGN}a). "
     "Use it where x lies far from 0: powers of x lose digits there, however exact their coefficients."
@@ -80,6 +82,13 @@ CAUTIONS = (
 def degree_name(degree: int) -> str:
     """`degree 2, quadratic`."""
     return f"degree {degree}, {DEGREES[degree]}" if degree < len(DEGREES) else f"degree {degree}"
+
+
+def visible(name: str) -> str:
+    """The name, or words for one that nobody could see or click."""
+    if any(c.isprintable() and not c.isspace() and c not in BLANK for c in name):
+        return name
+    return f"({len(name)} blank character{'s' if len(name) != 1 else ''})"
 
 
 def plain(code: str) -> str:

@@ -5,6 +5,7 @@ from typing import Any
 
 from reportlab.platypus import SimpleDocTemplate
 
+from service.web.pages import words
 from service.web.pages.gather import JobPage
 from service.web.report import look
 from service.web.report.story import Figures, Report
@@ -21,7 +22,7 @@ def report_pdf(page: JobPage, figures: Figures) -> bytes:
 
 
 def _build(page: JobPage, figures: Figures, *, pages: int | None) -> tuple[bytes, int]:
-    out, subject = BytesIO(), page.job["subject"]
+    out, subject = BytesIO(), words.visible(page.job["subject"])
     document = SimpleDocTemplate(
         out,
         pagesize=look.PAPER,

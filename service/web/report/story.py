@@ -53,7 +53,10 @@ class Report(Writer):
         said += [f", measured {moment(data['measured_at'])}. " if data["measured_at"] else ". "]
         said += [f"Verdict issued {moment(verdict['issued_at'])} by Leastbend {verdict['service_version']}"]
         said += [f"; submitted by {self.page.job['submitted_by']}; job {self.page.job['id']}."]
-        return [self.text(f"Calibration curve of {verdict['subject']}", "title"), self.text("".join(said), "under")]
+        return [
+            self.text(f"Calibration curve of {words.visible(verdict['subject'])}", "title"),
+            self.text("".join(said), "under"),
+        ]
 
     def _verdict(self) -> Story:
         verdict = self.signed

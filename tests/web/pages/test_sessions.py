@@ -109,6 +109,15 @@ def test_each_role_sees_what_its_key_sees(service: Service, browser: httpx.Clien
         assert ("read key" in browser.get("/queue").text) is (role == "read")
 
 
+def test_one_can_sign_out_from_the_page_of_an_error(browser: httpx.Client, keys: dict[str, str]):
+    sign_in(browser, keys["read"])
+    page = browser.get("/job/none-such")
+    assert page.status_code == 404
+    assert "read key, read" in page.text
+    out = browser.post("/sign-out", data={"form_token": form_token(page.text)})
+    assert out.url.path == "/sign-in"
+
+
 def test_forms_need_their_token_and_their_origin(service: Service, browser: httpx.Client):
     job = service.http.post("/v1/jobs", json={"dataset": BOWED}).json()["id"]
     token = form_token(browser.get(f"/job/{job}").text)
