@@ -17,7 +17,7 @@ from service.web.pages.page_route import PageRoute
 from service.web.pages.show import show
 from service.web.pages.visitors import VisitorDep
 from service.web.paging import cursor_of, position
-from service.web.schemas.common import Label
+from service.web.schemas.common import NO_CONTROLS
 from service.web.schemas.jobs import job_summary
 from service.workflows.read import list_jobs
 
@@ -123,7 +123,7 @@ async def subject(
     request: Request,
     context: Ctx,
     visitor: VisitorDep,
-    name: Annotated[Label, Query()],
+    name: Annotated[str, Query(min_length=1, max_length=200, pattern=NO_CONTROLS)],  # blank ones were once taken
     cursor: Annotated[str | None, Query(max_length=100)] = None,
 ) -> Response:
     """One instrument or method: its verdicts over time."""

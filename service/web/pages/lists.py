@@ -8,9 +8,13 @@ from fastapi import APIRouter, Query, Request
 from starlette.concurrency import run_in_threadpool
 from starlette.responses import Response
 
+from service.errors import FieldError, InvalidInput
+from service.store.batches import BatchItem
 from service.store.named_plans import NamedPlan
 from service.web.context import Context, Ctx
+from service.web.pages.labels import sentences
 from service.web.pages.page_route import PageRoute
+from service.web.pages.pasted import json_label
 from service.web.pages.show import show
 from service.web.pages.visitors import VisitorDep
 from service.web.paging import cursor_of, position
@@ -138,7 +142,7 @@ async def batch(
                 "state": one.state,
                 "verdict": one.verdict,
                 "chosen_degree": one.chosen_degree,
-                "error": one.error or (None if one.job_error is None else json.loads(one.job_error)),
+                "problems": _problems(one),
             }
             for one in some
         ]
@@ -153,6 +157,15 @@ async def batch(
         )
 
     return show(request, visitor, "batch.html", await run_in_threadpool(gather))
+
+
+def _problems(item: BatchItem) -> tuple[str, ...]:
+    """Why a dataset was refused or its job failed, in words; pointers are of its own line of the batch."""
+    error = item.error or (None if item.job_error is None else json.loads(item.job_error))
+    if error is None:
+        return ()
+    fields = [FieldError(one["pointer"], one["message"]) for one in error.get("errors") or ()]
+    return sentences(InvalidInput(fields), json_label) if fields else (error["message"],)
 
 
 def _plans_like(context: Context, plan_digest: str) -> list[NamedPlan]:

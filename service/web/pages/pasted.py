@@ -103,9 +103,11 @@ def read_table(table: Table, *, subject: str, details: dict[str, Any]) -> Datase
 
 def json_label(pointer: str) -> str:
     """Where in pasted JSON something stands; a subject that is missing there belongs into its field."""
+    if not pointer.removeprefix("/dataset"):
+        return ""
+    if pointer.startswith("/plan"):
+        return field_label(pointer)
     name, _, item = pointer.removeprefix("/dataset").removeprefix("/").partition("/")
-    if not name:
-        return "the JSON"
     place = f", item {int(item) + 1}" if item.isdecimal() else f", {item}" if item else ""
     return f"{name} in the JSON{place}"
 
