@@ -27,6 +27,7 @@ def scene(service: Service) -> Scene:
     """The demo calibrations done, a batch, a plan, and a job in each other state."""
     demo = json.loads(files("service.demo").joinpath("calibrations.json").read_text("utf-8"))["calibrations"]
     done = {one["dataset"]["subject"]: put(service, one["dataset"], plan=one["plan"]) for one in demo}
+    many = put(service, {**BOWED, "x": BOWED["x"] * 20, "y": BOWED["y"] * 20, "subject": "many points"})
     two = put(service, {**BOWED, "x": BOWED["x"][:4], "y": BOWED["y"][:4], "subject": "few points"})
     batch = service.http.post("/v1/batches", json={"datasets": [BOWED, {"subject": "bad", "x": [1]}]}).json()["id"]
     plan = service.http.post("/v1/plans", json={"name": "pressure, 0.1 % of span", "plan": PLAN}).json()["id"]
@@ -45,6 +46,7 @@ def scene(service: Service) -> Scene:
             "job, cancelled": f"/job/{cancelled}",
             "job, queued": f"/job/{queued}",
             "report": f"/job/{first}/report",
+            "report, many points": f"/job/{many}/report",
             "subject": "/subject?name=SM-PT-03",
             "queue": "/queue",
             "batches": "/batches",

@@ -1,10 +1,13 @@
 """Every page by axe-core, light and dark, wide and 320 px; and nothing wider than the screen."""
 
+import io
 from collections.abc import Iterator
 from typing import Literal
 
 import pytest
 from axe_playwright_python.sync_playwright import Axe
+from PIL import Image
+from playwright.sync_api import Locator
 
 from service.settings import Settings
 from tests.browser.conftest import DESKTOP, PHONE, Opener
@@ -53,6 +56,40 @@ def test_nothing_is_wider_than_the_screen(shown: Shown, open_page: Opener, width
             box = image.bounding_box()
             assert box is not None
             assert NARROWEST_FIGURE <= box["width"] <= width, name
+
+
+def test_tables_of_the_report_fit_a_wide_screen(shown: Shown, open_page: Opener):
+    service, addresses = shown
+    page = open_page(service, viewport={"width": 1280, "height": 800})
+    page.goto(addresses["report"])
+    tables = page.locator(".wide").all()
+    assert len(tables) >= 3
+    for table in tables:
+        assert table.evaluate("one => one.scrollWidth <= one.clientWidth")
+
+
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_a_table_that_goes_on_is_shaded_where_it_does(
+    shown: Shown, open_page: Opener, scheme: Literal["light", "dark"]
+):
+    service, addresses = shown
+    page = open_page(service, viewport=PHONE, color_scheme=scheme)
+    page.goto(addresses["report"])
+    table = page.locator(".wide[aria-labelledby=candidates]")
+    assert table.evaluate("one => one.scrollWidth > one.clientWidth")
+    paper = _edge(table, "left")
+    assert _edge(table, "right") != paper
+    table.evaluate("one => { one.scrollLeft = one.scrollWidth }")
+    assert _edge(table, "left") != paper
+    assert _edge(table, "right") == paper
+
+
+def _edge(table: Locator, side: Literal["left", "right"]) -> tuple[int, ...]:
+    """Colour of the last pixel of the table's head at one side."""
+    picture = Image.open(io.BytesIO(table.screenshot())).convert("RGB")
+    found = picture.getpixel((1 if side == "left" else picture.width - 2, 2))
+    assert isinstance(found, tuple)
+    return found
 
 
 def test_text_can_be_doubled_in_size(shown: Shown, open_page: Opener):
