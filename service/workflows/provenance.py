@@ -34,7 +34,7 @@ def this_machine() -> Machine:
         },
         blas=[
             {"library": pool["internal_api"], "version": pool["version"], "threads": pool["num_threads"]}
-            for pool in threadpoolctl.threadpool_info()
+            for pool in sorted(threadpoolctl.threadpool_info(), key=lambda pool: str(pool["version"]))
             if pool["user_api"] == "blas"
         ],
         platform=platform.platform(),
