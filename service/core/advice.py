@@ -39,7 +39,7 @@ def settle_bend(found: Findings, limit: BendLimit) -> list[Advice]:
             each = "once more" if times == 1 else f"{times} more times"
             what = f"Repeat the lowest and the highest level {each} ({added.size} readings)"
         else:
-            places = ", ".join(f"{v:.6g}" for v in added)
+            places = ", ".join(f"{found.x_words(v)}" for v in added)
             what = f"Add one reading at each of {added.size} new levels: x = {places}"
         best[action] = Advice(
             action=action,
@@ -57,7 +57,7 @@ def settle_spare_points(found: Findings) -> Advice:
     o = found.observations
     missing = max(columns + 2 - o.levels, columns + 3 - o.n, 1)
     new = _new_levels(o.level_x, missing)
-    places = ", ".join(f"{v:.6g}" for v in new)
+    places = ", ".join(f"{found.x_words(v)}" for v in new)
     return Advice(
         action="add_levels",
         added_readings=missing,
@@ -74,7 +74,7 @@ def settle_range(found: Findings) -> Advice:
     """Levels at those ends of the working range asked for that the points do not reach."""
     asked, (lo, hi) = found.plan.working_range or found.full.domain, found.full.domain
     ends = [end for end, beyond in ((asked[0], asked[0] < lo), (asked[1], asked[1] > hi)) if beyond]
-    places = " and ".join(f"{end:.6g}" for end in ends)
+    places = " and ".join(f"{found.x_words(end)}" for end in ends)
     return Advice(
         action="add_levels",
         added_readings=len(ends),

@@ -1,5 +1,6 @@
 """Everything found about the chosen fit, in one place, for the warnings, requirements and verdict."""
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -60,6 +61,12 @@ class Findings:
     def least_slope(self) -> float | None:
         """Smallest |dy/dx| in the working range; None where the curve is not monotonic."""
         return min(abs(self.slope[0]), abs(self.slope[1])) if self.monotonic else None
+
+    def x_words(self, x: float) -> str:
+        """An x as messages show it: with as many digits as tell the points of this range apart."""
+        lo, hi = self.full.domain
+        far = min(max(abs(lo), abs(hi)) / (hi - lo), 1e11)
+        return f"{x:.{6 + max(0, math.floor(math.log10(far)))}g}"
 
     @property
     def no_dependence(self) -> bool:

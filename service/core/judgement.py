@@ -76,8 +76,9 @@ def _not_covered(found: Findings, advice: list[Advice]) -> list[Reason]:
     advice.append(settle_range(found))
     (lo, hi), (first, last) = found.plan.working_range, found.full.domain
     message = (
-        f"The working range asked for is {lo:g} to {hi:g}, and the points lie from {first:g} to {last:g}: nothing is "
-        f"known beyond them, and what is answered here holds between them only. {advice[-1].message}"
+        f"The working range asked for is {found.x_words(lo)} to {found.x_words(hi)}, and the points lie from "
+        f"{found.x_words(first)} to {found.x_words(last)}: nothing is known beyond them, and what is answered here "
+        f"holds between them only. {advice[-1].message}"
     )
     return [Reason(code="range_not_covered", severity="caution", message=message)]
 

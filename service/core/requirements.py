@@ -78,11 +78,11 @@ def _monotonic(found: Findings) -> RequirementAnswer:
         met = None
         message = "The readings do not show whether the curve rises or falls: its slope may as well be 0."
     elif found.monotonic:
-        message = f"The curve {word} throughout, from {lo:g} to {hi:g}."
+        message = f"The curve {word} throughout, from {found.x_words(lo)} to {found.x_words(hi)}."
     else:
         message = (
-            f"The curve turns or is flat between {lo:g} and {hi:g} (slope {least:.4g} to {greatest:.4g}), so one "
-            "reading can mean more than one value."
+            f"The curve turns or is flat between {found.x_words(lo)} and {found.x_words(hi)} (slope {least:.4g} to "
+            f"{greatest:.4g}), so one reading can mean more than one value."
         )
     return RequirementAnswer(
         requirement="monotonic",
@@ -158,8 +158,8 @@ def _permissible_error(found: Findings, asked: MaxPermissibleError) -> Requireme
     what = {"percent_of_value": "% of value", "percent_of_span": "% of span"}.get(asked.kind, f"in {asked.of}")
     met = bool(ratio[worst] <= 1)
     message = (
-        f"The largest error of a calibration point is {largest:.4g} {what} (point {worst + 1}, x = {o.x[worst]:g}); "
-        f"{asked.value:g} is allowed."
+        f"The largest error of a calibration point is {largest:.4g} {what} (point {worst + 1}, "
+        f"x = {found.x_words(o.x[worst])}); {asked.value:g} is allowed."
     )
     if left_out := int(np.isnan(allowed[found.in_range]).sum()):
         points = "1 point has" if left_out == 1 else f"{left_out} points have"

@@ -187,3 +187,12 @@ def test_points_that_have_no_percentage_are_named() -> None:
     assert "1 point has no value to take a percentage of" in answer(Requirements(max_permissible_error=blank)).message
     back = answer(Requirements(back_calculated=BackCalculated(limit_percent=50.0)))
     assert "Blanks (x = 0): 1, not judged" in back.message
+
+
+def test_places_far_from_zero_are_told_apart() -> None:
+    """A frequency standard: ten megahertz and a few hertz."""
+    found = run(1e7 + X, Y, fixed(1, requirements=Requirements(max_permissible_error=MaxPermissibleError(value=1.0))))
+    monotonic, error = found.requirements
+    assert "from 10000000 to 10000008" in monotonic.message
+    assert error.worst_x is not None
+    assert f"x = {error.worst_x:.0f}" in error.message

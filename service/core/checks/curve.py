@@ -37,8 +37,8 @@ def not_monotonic(found: Findings) -> Warning | None:
     least, greatest, at = found.slope
     asked = found.plan.requirements.monotonic
     message = (
-        f"The curve turns or is flat near x = {at:.6g}: there one reading belongs to more than one value, and the "
-        "instrument cannot be used backwards over the whole range. Limit the working range to one side of it"
+        f"The curve turns or is flat near x = {found.x_words(at)}: there one reading belongs to more than one value, "
+        "and the instrument cannot be used backwards over the whole range. Limit the working range to one side of it"
         + (", or state in the plan that a monotonic curve is not needed." if asked else ".")
     )
     return Warning(

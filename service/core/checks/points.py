@@ -22,12 +22,12 @@ def point_rules_fit(found: Findings) -> Warning | None:
     if not ruled and not moving:
         return None
     point = strongest if ruled else int(np.argmax(cooks))
-    x = found.observations.x[point]
+    named = f"Point {point + 1} (x = {found.x_words(found.observations.x[point])})"
     message = (
-        f"Point {point + 1} (x = {x:g}) stands alone: the curve goes through it whatever it reads, so an error there "
+        f"{named} stands alone: the curve goes through it whatever it reads, so an error there "
         "goes unnoticed into every later value. Repeat that level or add one near it."
         if ruled
-        else f"Point {point + 1} (x = {x:g}) moves the whole curve by more than its uncertainty. Repeat that level."
+        else f"{named} moves the whole curve by more than its uncertainty. Repeat that level."
     )
     return Warning(
         code="point_rules_fit",
@@ -75,7 +75,8 @@ def wide_gap(found: Findings) -> Warning | None:
             code="wide_gap",
             severity="caution" if found.uncovered > OUTSIDE_SHARE else "note",
             message=(
-                f"The working range asked for, {asked[0]:g} to {asked[1]:g}, goes beyond the points, {lo:g} to {hi:g}. "
+                f"The working range asked for, {found.x_words(asked[0])} to {found.x_words(asked[1])}, goes "
+                f"beyond the points, {found.x_words(lo)} to {found.x_words(hi)}. "
                 "Everything here holds between the points only; nothing is known beyond them. Add levels at the ends."
             ),
             evidence=Evidence(value=found.uncovered, threshold=OUTSIDE_SHARE),
@@ -88,7 +89,7 @@ def wide_gap(found: Findings) -> Warning | None:
     degree = found.degree if here > GAP_CAUTION else found.degree + 1
     low, high = _widest_freedom(found, degree)
     message = (
-        f"Between x = {low:g} and {high:g} no point holds the curve"
+        f"Between x = {found.x_words(low)} and {found.x_words(high)} no point holds the curve"
         + (
             ": there it is less certain than a single reading. "
             if here > GAP_CAUTION

@@ -26,7 +26,7 @@ def suspect_point(found: Findings) -> Warning | None:
     if one is None and several is None and not changed:
         return None
     points = list(dict.fromkeys([*aside, *(several.points if several else ()), *(one[:1] if one else ())]))
-    named = ", ".join(f"{i + 1} (x = {found.observations.x[i]:g})" for i in points)
+    named = ", ".join(f"{i + 1} (x = {found.x_words(found.observations.x[i])})" for i in points)
     alone = len(points) == 1
     message = (
         f"Point {named} does not belong with the others" if alone else f"Points {named} do not belong with the others"

@@ -1,1 +1,1 @@
-"""The report of one job as PDF: two pages for an ordinary calibration."""
+"""The report of one job as PDF: two or three pages for an ordinary calibration."""

@@ -34,7 +34,7 @@ SHOWN: tuple[FigureName, ...] = ("curve", "degrees", "residuals", "unseen")
     summary="Report of a job as PDF",
 )
 async def get_report(request: Request, context: Ctx, caller: CallerDep, job_id: Identifier) -> Response:
-    """Verdict, figures, curve, requirements, candidates, warnings, digests and cautions on two pages.
+    """Verdict, figures, curve, requirements, candidates, warnings, digests and cautions on two or three pages.
 
     404 `result_not_ready` until the job has ended, `no_result` if it ended without one.
     """
