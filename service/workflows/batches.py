@@ -49,7 +49,7 @@ def submit_batch(
     if not posted:
         raise InvalidInput.at("/datasets", "holds no dataset")
     if len(posted) > settings.batch_size:
-        raise TooLarge(f"the batch has {len(posted)} datasets; at most {settings.batch_size} are taken")
+        raise TooLarge(f"at most {settings.batch_size} datasets are taken in one batch")
     checked = [_checked(one, plan, settings) for one in posted]
     good = [one for one in checked if not isinstance(one, dict)]
     document = plan_document(plan)

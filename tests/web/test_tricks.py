@@ -299,6 +299,9 @@ def test_every_limit_is_named_in_its_problem(open_service: Service) -> None:
             answer = service.http.post(path, json=body)
             assert (answer.status_code, answer.json()["code"]) == (413, "too_large")
             assert said in answer.json()["detail"]
+        lines = b"{}\n" * 1_000_000  # none of them is looked at
+        answer = service.http.post("/v1/batches", content=lines, headers={"Content-Type": "application/x-ndjson"})
+        assert (answer.status_code, answer.json()["code"]) == (413, "too_large")
         for path in ("/v1/jobs", "/v1/datasets", "/v1/batches", "/v1/plans", "/v1/verdicts"):
             assert service.http.get(path, params={"limit": 7}).status_code == 200
             refused = service.http.get(path, params={"limit": 8})

@@ -41,12 +41,12 @@ async def posted_batch(
 ) -> PostedBatch:
     """The batch; with NDJSON each line is one dataset, and the query says the rest."""
     kind = demand_type(request, JSON, NDJSON)
-    raw = await read_body(request)
+    raw, most = await read_body(request), request.app.state.context.settings.batch_size
     if kind == NDJSON:
-        return await run_in_threadpool(datasets_of, raw, plan_id, priority or 0)
+        return await run_in_threadpool(lambda: datasets_of(raw, plan_id, priority or 0, most=most))
     if plan_id is not None or priority is not None:
         raise InvalidInput.at("/query", "plan_id and priority belong into the body when that is JSON")
-    return await run_in_threadpool(lambda: read_value(BatchBody, parse_json(raw)).posted())
+    return await run_in_threadpool(lambda: read_value(BatchBody, parse_json(raw)).posted(most=most))
 
 
 @router.post(

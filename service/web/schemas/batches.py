@@ -3,12 +3,14 @@
 import json
 from dataclasses import dataclass
 from datetime import datetime
+from io import BytesIO
+from itertools import islice
 from typing import Any, Self
 
 from pydantic import Field, model_validator
 
 from service.core.plan import Plan
-from service.errors import FieldError, InvalidInput, MalformedInput
+from service.errors import FieldError, InvalidInput, MalformedInput, TooLarge
 from service.store.batches import BatchItem, BatchRecord
 from service.store.clock import rfc3339
 from service.store.records import DatasetContent
@@ -55,8 +57,9 @@ class BatchBody(Body):
             raise ValueError("give at most one of plan and plan_id")
         return self
 
-    def posted(self) -> PostedBatch:
-        """Each dataset by itself."""
+    def posted(self, *, most: int) -> PostedBatch:
+        """Each dataset by itself. Raises TooLarge before it looks at any, if there are more than `most`."""
+        demand_few(len(self.datasets), most)
         return PostedBatch(
             datasets=[_read(one) for one in self.datasets],
             plan=None if self.plan is None else self.plan.plan("/plan"),
@@ -101,9 +104,16 @@ class BatchItemView(Answer):
     result: JobResult | None
 
 
-def datasets_of(raw: bytes, plan_id: str | None, priority: int) -> PostedBatch:
-    """NDJSON: a dataset a line; empty lines do not count."""
-    lines = [line for line in raw.split(b"\n") if line.strip()]
+def demand_few(datasets: int, most: int) -> None:
+    """Raises TooLarge."""
+    if datasets > most:
+        raise TooLarge(f"at most {most} datasets are taken in one batch")
+
+
+def datasets_of(raw: bytes, plan_id: str | None, priority: int, *, most: int) -> PostedBatch:
+    """NDJSON: a dataset a line; empty lines do not count. Raises TooLarge before it looks at any line."""
+    lines = list(islice((line for line in BytesIO(raw) if line.strip()), most + 1))
+    demand_few(len(lines), most)
     if not lines:
         raise MalformedInput.at("", "the body is empty; one dataset a line is expected")
     return PostedBatch(datasets=[_line(line) for line in lines], plan=None, plan_id=plan_id, priority=priority)
