@@ -164,6 +164,16 @@ def test_history_is_filtered_and_paged(service: Service) -> None:
         assert [job["id"] for job in client.history(until=middle)] == ids[:3][::-1]
 
 
+def test_a_plans_name_is_not_its_digest(service: Service) -> None:
+    """An empty list would say that nothing ran under it."""
+    answer = service.http.get("/v1/jobs", params={"plan": "water"})
+    assert answer.status_code == 422
+    assert answer.json()["errors"][0]["pointer"] == "/query/plan"
+    assert "digest" in answer.json()["errors"][0]["message"]
+    digest = post(service)["plan_digest"]
+    assert len(service.http.get("/v1/jobs", params={"plan": digest}).json()["items"]) == 1
+
+
 def test_pages_neither_skip_nor_repeat_while_jobs_come_in(service: Service) -> None:
     old = [post(service)["id"] for _ in range(6)]
     seen, cursor = list[str](), None

@@ -19,7 +19,7 @@ from service.web.openapi_details import NOT_MODIFIED
 from service.web.paging import Cursor, Limit, cursor_of, position
 from service.web.prefer import Prefer, applied, preferences, seconds_to_wait
 from service.web.problems import documented
-from service.web.schemas.common import Identifier, Label, Moment, PageOf
+from service.web.schemas.common import DIGEST, Identifier, Label, Moment, PageOf
 from service.web.schemas.jobs import JobBody, JobSummary, JobView, StateWord, VerdictWord, job_document, job_summary
 from service.web.strict_json import json_body
 from service.workflows.callers import Caller
@@ -122,7 +122,7 @@ def get_jobs(
     submitted_by: Annotated[Label | None, Query(description="Name of the key that submitted it.")] = None,
     since: Annotated[Moment | None, Query(description="Queued at this time or later.")] = None,
     until: Annotated[Moment | None, Query(description="Queued before this time.")] = None,
-    plan: Annotated[Label | None, Query(description="Digest of the plan.")] = None,
+    plan: Annotated[str | None, Query(pattern=DIGEST, description="Digest of the plan, not its name.")] = None,
     cursor: Cursor = None,
     limit: Limit = None,
 ) -> Response:

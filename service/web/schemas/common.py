@@ -26,10 +26,12 @@ NO_CONTROLS = r"^[^\x00-\x1f\x7f]*$"  # PostgreSQL text holds no NUL; logs and p
 VISIBLE = r"^[^\x00-\x1f\x7f]*[^\x00-\x20\x7f\u00a0\u2000-\u200b\u3000][^\x00-\x1f\x7f]*$"
 NO_SPACES = r"^[\x21-\x7e]+$"
 IDENTIFIER = r"^[0-9A-Za-z-]{1,64}$"
+DIGEST = r"^[0-9a-f]{64}$"
 WORDS_OF_PATTERNS = {
     NO_CONTROLS: "must not hold control characters",
     VISIBLE: "must hold a visible character, and no control characters",
     NO_SPACES: "must be an address without spaces, in printable ASCII characters",
+    DIGEST: "must be a digest: 64 hexadecimal digits, lower case",
     IDENTIFIER: "must be 1 to 64 letters, digits and hyphens",
 }
 
