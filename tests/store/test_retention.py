@@ -131,10 +131,9 @@ def test_points_purged_before_the_jobs_of_a_batch_refuse_it(desk: Desk, monkeypa
     assert desk.take(seconds=3 * DAY) is not None
 
 
+@pytest.mark.parametrize("engine", ["postgresql"], indirect=True)
 def test_points_in_the_hands_of_somebody_are_not_purged(desk: Desk) -> None:
     """On PostgreSQL purging and putting in go on at once; on SQLite one waits for the other."""
-    if not desk.database.postgres:
-        pytest.skip("one writer at a time")
     used, posted, neither = (desk.job(finished(desk, seed, seconds=0)) for seed in range(3))
     content = calibration(1)
     digest_of = digest(datasets.dataset_document(content))
