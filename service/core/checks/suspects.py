@@ -11,6 +11,7 @@ from service.core.screen import farthest, outlier_p, studentised
 
 OUTLIER = 0.01
 OUTLIER_SERIOUS = 1e-4
+FAR = 6.0  # times the median size of a residual, some four standard deviations: nearer, none of several is wild
 BEYOND = 1e4  # times the scatter: a number would only say that the others hardly scatter
 PULL_SERIOUS = 1.0  # of the standard deviation of a reading: from there on the curve is wrong by more than scatter
 
@@ -94,6 +95,9 @@ def _several(found: Findings, one: tuple[int, float, float] | None) -> Outliers 
     """Looked for only where something shows: a far point, or residuals that are not normal, as several make them."""
     normal = found.diagnostics.normality.p
     if _believed(found) or found.exact or (one is None and (normal is None or normal >= NOTE)):
+        return None
+    size = np.abs(found.full.residuals[:, found.degree])
+    if one is None and size.max() < FAR * float(np.median(size)):
         return None
     several = find_outliers(found.full, found.degree, step=_step(found))
     return several if several is not None and len(several.points) > 1 else None
