@@ -206,6 +206,18 @@ def test_one_step_of_the_readings_is_no_wild_point() -> None:
     assert raised.evidence.points == (4,)
 
 
+def test_the_degrees_named_are_those_that_the_plan_allows() -> None:
+    """Without the wild reading the walk ends at 3, with it at 1; but the plan starts at 2."""
+    x = np.linspace(1, 10, 20)
+    t = (x - 5.5) / 4.5
+    y = 3 * x + 0.05 * (4 * t**3 - 3 * t) + 0.02 * noise(20)
+    y[3] += 0.8
+    assert "with it 1." in warning(run(x, y, Plan(weights="equal")), "suspect_point").message  # type: ignore[union-attr]
+    raised = warning(run(x, y, Plan(min_degree=2, weights="equal")), "suspect_point")
+    assert raised is not None
+    assert "without it the degree is 3, with it 2." in raised.message
+
+
 def test_a_wild_point_under_a_fixed_degree_changes_no_choice() -> None:
     x = np.linspace(1, 10, 20)
     y = 3 * x + 0.02 * x**2 + 0.1 * noise(20)

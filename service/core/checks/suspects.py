@@ -21,7 +21,8 @@ def suspect_point(found: Findings) -> Warning | None:
     walked = found.choice.walked
     aside = tuple(a.point for a in walked.aside) if found.plan.rule == "least_bend" else ()
     least = found.plan.min_degree
-    changed = bool(aside) and max(walked.degree, least) != max(walked.degree_with_all, least)
+    without, with_all = max(walked.degree, least), max(walked.degree_with_all, least)
+    changed = bool(aside) and without != with_all
     one = _farthest(found)
     several = _several(found, one)
     if one is None and several is None and not changed:
@@ -39,8 +40,8 @@ def suspect_point(found: Findings) -> Warning | None:
     if changed:
         severity = "serious"
         message += (
-            f"; without {it} the degree is {walked.degree}, with {it} {walked.degree_with_all}. The degree was chosen "
-            f"without, but the fitted curve still holds {it}. "
+            f"; without {it} the degree is {without}, with {it} {with_all}. The degree was chosen without, but the "
+            f"fitted curve still holds {it}. "
         )
     elif pull is not None:
         severity = "caution" if bends else "serious"
